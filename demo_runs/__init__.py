@@ -1,0 +1,1 @@
+"""An invented reaction, its simulator, and a player that acts as an instrument would."""

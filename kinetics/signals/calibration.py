@@ -1,0 +1,272 @@
+"""What a run's first spectra teach: made from the first one, and once more from the first twenty.
+
+`calibrate` is a pure function of raw spectra and the plan. Everything that `measure` takes for
+granted about a run stands in the `Calibration` it returns.
+"""
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+
+from kinetics.errors import UnreadableError
+from kinetics.signals.model import FollowPlan, Signal
+from kinetics.signals.pattern import sticks
+from kinetics.signals.response import Response, make_response
+from kinetics.spectra.align import Template, displacement, line_near, make_template
+from kinetics.spectra.baseline import merged
+from kinetics.spectra.fourier import transform
+from kinetics.spectra.lines import (
+    LinePosition,
+    find_lines,
+    noise_sd,
+    occupied_ranges,
+    width_at_half,
+)
+from kinetics.spectra.model import Axis, Float32, Float64, Raw
+from kinetics.spectra.phase import fit_phase, line_phases
+from kinetics.spectra.processing import (
+    Phased,
+    Settings,
+    Shared,
+    Window,
+    baseline_operator_for,
+    corrected_baseline,
+    phased,
+)
+
+# Beyond this the shift reference is sought outside its window too, in ppm.
+_SEARCH_BEYOND = 0.3
+_SMALLEST_SNR = 5.0
+# Shapes for following take in a quarter of the window; a signal must stand this far out of the
+# noise of the mean spectrum to have a shape of its own.
+SHAPE_SNR = 10.0
+# The template for alignment spans the declared windows and this much on either side, in ppm.
+_TEMPLATE_MARGIN = 0.75
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Calibration:
+    """What the spectra of a run share.
+
+    Attributes
+    ----------
+    version
+        1 for that from the first spectrum, 2 for that from the first twenty.
+    learned_from
+        SHA-256 of each raw spectrum it was learned from.
+    shared
+        First-order phase, alignment template, occupied ranges, shift of the reference.
+    first_shift_ppm
+        Shift correction of the first spectrum.
+    line_width_hz
+        Full width at half height of the reference line in the mean spectrum.
+    shapes
+        Mean shape of each signal in its window, float32, empty where it could not be seen.
+    shape_step_ppm
+        Point distance of `shapes` (negative).
+    response
+        How sums over windows answer to line areas, and the noise of the sums.
+    """
+
+    version: int
+    learned_from: tuple[str, ...]
+    shared: Shared
+    first_shift_ppm: float
+    line_width_hz: float
+    shapes: tuple[Float32, ...]
+    shape_step_ppm: float
+    response: Response
+
+
+def calibrate(raws: Sequence[Raw], plan: FollowPlan, version: int = 1) -> Calibration:
+    """Learn from the first spectra of a run.
+
+    Parameters
+    ----------
+    raws
+        One or more spectra, in order of time.
+    plan
+        What is followed.
+    version
+        Number the calibration shall carry.
+
+    Raises
+    ------
+    UnreadableError
+        If the first spectrum cannot be processed at all.
+    """
+    settings = plan.settings
+    p1 = _first_order_phase(raws, settings)
+    parts = [phased(raw, settings, None if np.isnan(p1) else p1) for raw in raws]
+    first = parts[0]
+    axis, shift = _first_axis(first, settings)
+    template = make_template(first.values, axis, _template_range(plan, axis), settings.exclude)
+    mean = _mean_spectrum(parts, axis, template, settings, shift)
+    frequency = raws[0].frequency_mhz or float("nan")
+    corrected, occupied, sd = _settled_baseline(mean, axis, settings)
+    width_ppm = _line_width(corrected, axis, shift, plan, sd)
+    shared = Shared(p1, template, occupied, shift)
+    shapes = tuple(_shape(corrected, axis, signal, sd) for signal in plan.all)
+    lines = [_lines_of(corrected, axis, signal, sd, frequency) for signal in plan.all]
+    response = make_response(
+        plan,
+        axis,
+        corrected,
+        lines,
+        width_ppm,
+        None if settings.baseline == "none" else baseline_operator_for(axis, settings, occupied),
+        first.noise_correlation,
+        sd,
+    )
+    return Calibration(
+        version=version,
+        learned_from=tuple(raw.sha256 for raw in raws),
+        shared=shared,
+        first_shift_ppm=axis.first_ppm - first.axis.first_ppm,
+        line_width_hz=width_ppm * frequency,
+        shapes=shapes,
+        shape_step_ppm=axis.step_ppm,
+        response=response,
+    )
+
+
+def _first_order_phase(raws: Sequence[Raw], settings: Settings) -> float:
+    """Weighted median of the first-order phase over the spectra; nan where none is needed."""
+    if settings.phase != "automatic":
+        return float("nan")
+    slopes: list[tuple[float, float]] = []
+    for raw in raws:
+        if raw.domain != "time" or raw.frequency_mhz is None:
+            continue
+        spectrum = transform(
+            raw, broadening_hz=settings.broadening_hz, zero_fill=settings.zero_fill
+        )
+        lines = line_phases(raw, spectrum, settings.exclude)
+        phase = fit_phase(lines)
+        if phase is not None:
+            slopes.append((phase.p1_deg, float((1.0 / lines.sigma_deg).sum())))
+    if not slopes:
+        return float("nan")
+    values, weights = np.array(slopes).T
+    order = np.argsort(values)
+    half_way = np.searchsorted(np.cumsum(weights[order]), 0.5 * weights.sum())
+    return float(values[order][half_way])
+
+
+def _first_axis(part: Phased, settings: Settings) -> tuple[Axis, float]:
+    """Axis of the first spectrum after referencing, and where its shift reference then stands."""
+    if settings.shift_window is None:
+        return part.axis, float("nan")
+    low, high = settings.shift_window
+    middle, half = 0.5 * (low + high), 0.5 * (high - low)
+    found, height = line_near(part.values, part.axis, middle, half)
+    if height < _SMALLEST_SNR * noise_sd(part.values):
+        found, height = line_near(part.values, part.axis, middle, half + _SEARCH_BEYOND)
+        if height < _SMALLEST_SNR * noise_sd(part.values):
+            raise UnreadableError(
+                f"no line stands out of the noise near the shift reference at {middle:.3f} ppm"
+            )
+    target = found if settings.shift_target is None else settings.shift_target
+    return part.axis.shifted(target - found), target
+
+
+def _template_range(plan: FollowPlan, axis: Axis) -> Window:
+    ends = [limit for signal in plan.all for limit in signal.window]
+    if plan.settings.shift_window is not None:
+        ends.extend(plan.settings.shift_window)
+    last = axis.first_ppm + axis.step_ppm * (axis.size - 1)
+    low = max(min(ends) - _TEMPLATE_MARGIN, last)
+    high = min(max(ends) + _TEMPLATE_MARGIN, axis.first_ppm)
+    return (low, high) if high > low + 0.05 else (last, axis.first_ppm)
+
+
+def _mean_spectrum(
+    parts: Sequence[Phased], axis: Axis, template: Template, settings: Settings, shift: float
+) -> Float32:
+    """Mean of the spectra, each laid over the first, on the axis of the first, shape (n,)."""
+    total = parts[0].values.astype(np.float64)
+    ppm = axis.ppm()[::-1]
+    for part in parts[1:]:
+        moved = part.axis.shifted(-displacement(part.values, part.axis, template, settings.exclude))
+        if not np.isnan(shift):
+            moved = moved.shifted(shift - line_near(part.values, moved, shift)[0])
+        total += np.interp(ppm, moved.ppm()[::-1], part.values[::-1])[::-1]
+    return np.asarray(total / len(parts), np.float32)
+
+
+def _settled_baseline(
+    mean: Float32, axis: Axis, settings: Settings
+) -> tuple[Float32, tuple[Window, ...], float]:
+    """Find where lines stand and correct the baseline, twice: each needs the other."""
+    occupied: tuple[Window, ...] = ()
+    corrected, sd = mean, 0.0
+    for _ in range(3):
+        corrected, _, _ = corrected_baseline(mean, axis, settings, occupied)
+        free = baseline_operator_for(axis, settings, occupied).free
+        sd = noise_sd(corrected, free)
+        occupied = merged(occupied_ranges(corrected, axis, sd, _points_of_a_line(axis)))
+    corrected, _, _ = corrected_baseline(mean, axis, settings, occupied)
+    return corrected, occupied, sd
+
+
+def _points_of_a_line(axis: Axis) -> float:
+    return max(0.004 / abs(axis.step_ppm), 2.0)
+
+
+def _line_width(corrected: Float32, axis: Axis, shift: float, plan: FollowPlan, sd: float) -> float:
+    """Width at half height in ppm of the reference line, or of the narrowest signal."""
+    limit = max(round(0.15 / abs(axis.step_ppm)), 8)
+    places = [] if np.isnan(shift) else [shift]
+    places += [_top(corrected, axis, signal)[0] for signal in plan.all]
+    widths = []
+    for place in places:
+        index = axis.position(place)
+        if not 1 <= index < axis.size - 1:
+            continue
+        line = LinePosition(index, float(corrected[round(index)]))
+        width = width_at_half(corrected, line, limit) * abs(axis.step_ppm)
+        if line.height > _SMALLEST_SNR * sd and np.isfinite(width):
+            if place == shift:
+                return width
+            widths.append(width)
+    return min(widths, default=4.0 * abs(axis.step_ppm))
+
+
+def _top(corrected: Float32, axis: Axis, signal: Signal) -> tuple[float, float]:
+    return line_near(corrected, axis, signal.centre, 0.5 * signal.width)
+
+
+def _shape(corrected: Float32, axis: Axis, signal: Signal, sd: float) -> Float32:
+    start, stop = axis.span(signal.window)
+    part = corrected[max(int(start), 0) : max(int(np.ceil(stop)), 0)]
+    if part.size < 8 or part.max() < SHAPE_SNR * sd:
+        return np.zeros(0, np.float32)
+    return np.array(part)
+
+
+def _lines_of(
+    corrected: Float32, axis: Axis, signal: Signal, sd: float, frequency: float
+) -> tuple[Float64, Float64]:
+    """Centres (ppm) and shares of the lines a signal is made of.
+
+    The pattern of the sheet about the signal's middle where couplings are stated; otherwise the
+    lines seen in the mean spectrum; otherwise one line in the middle of the window.
+    """
+    start, stop = (round(v) for v in axis.span(signal.window))
+    start, stop = max(start, 0), min(stop, axis.size)
+    part = corrected[start:stop]
+    if part.size < 8 or part.max() < _SMALLEST_SNR * sd:
+        centre = np.array([signal.centre])
+        seen, heights = centre, np.ones(1)
+    else:
+        found = find_lines(part, max(sd, 0.08 * float(part.max()) / 6.0))
+        if found.size == 0:
+            found = np.array([int(np.argmax(part))])
+        seen = axis.first_ppm + axis.step_ppm * (start + found)
+        heights = part[found].astype(np.float64)
+    if signal.couplings and np.isfinite(frequency):
+        offsets, shares = sticks(signal.couplings)
+        middle = float((seen * heights).sum() / heights.sum())
+        return middle + offsets / frequency, shares
+    return seen, heights / heights.sum()

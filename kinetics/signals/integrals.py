@@ -1,0 +1,110 @@
+"""Integrals of one spectrum: windows that follow, sums, and their covariance."""
+
+import numpy as np
+
+from kinetics.signals.calibration import SHAPE_SNR, Calibration
+from kinetics.signals.model import FollowPlan, Integrals, Signal
+from kinetics.signals.windows import window_weights
+from kinetics.spectra.model import Axis, Float32, Float64, Spectrum
+
+# A signal's own drift against the reference is followed this far, in ppm.
+FOLLOW_PPM = 0.025
+# An exchanging proton wanders farther.
+FOLLOW_EXCHANGING_PPM = 0.05
+
+
+def integrate(spectrum: Spectrum, plan: FollowPlan, calibration: Calibration) -> Integrals:
+    """Integrate the reference and all signals of a spectrum.
+
+    Parameters
+    ----------
+    spectrum
+        Processed and referenced.
+    plan
+        What is followed.
+    calibration
+        Of the run.
+
+    Returns
+    -------
+    Integrals
+        Areas corrected for cut-off tails and for the tails of one another.
+    """
+    axis, count = spectrum.axis, len(plan.all)
+    offsets, heights, sums = np.zeros(count), np.zeros(count), np.zeros(count)
+    noise = max(spectrum.noise_sd, 1e-30)
+    for index, signal in enumerate(plan.all):
+        shape = calibration.shapes[index]
+        offsets[index] = own_drift(spectrum, signal, shape, calibration.shape_step_ppm)
+        low, high = signal.window
+        window = (low + offsets[index], high + offsets[index])
+        start, stop = (int(v) for v in axis.span(window))
+        part = spectrum.intensities[max(start, 0) : max(stop + 1, 0)]
+        heights[index] = float(part.max()) / noise if part.size else 0.0
+        local = calibration.response.local_baseline[index]
+        sums[index] = window_weights(axis, window, local_baseline=local).of(spectrum.intensities)
+    response = calibration.response
+    inverse = np.linalg.inv(response.at_width(_width_ppm(spectrum, calibration)))
+    # The response was prepared on the calibration's point distance; noise of a sum of points
+    # scales with its square root.
+    scale = abs(axis.step_ppm / calibration.shape_step_ppm)
+    covariance = inverse @ response.noise @ inverse.T * spectrum.noise_sd**2 * scale
+    return Integrals(inverse @ sums, covariance, offsets, heights)
+
+
+def _width_ppm(spectrum: Spectrum, calibration: Calibration) -> float:
+    """Line width of this spectrum; that of the calibration where it cannot be measured."""
+    width = spectrum.line_width_hz / spectrum.frequency_mhz
+    usual = calibration.response.line_width_ppm
+    return width if np.isfinite(width) and 0.3 * usual < width < 5 * usual else usual
+
+
+def own_drift(spectrum: Spectrum, signal: Signal, shape: Float32, shape_step_ppm: float) -> float:
+    """Return how far a signal has moved against the reference since the calibration, in ppm.
+
+    The signal's mean shape is laid over the spectrum by correlation, to a fraction of a point.
+    A signal too weak to be seen keeps its place beside the reference: zero.
+    """
+    axis = spectrum.axis
+    if not signal.follow or shape.size < 8:
+        return 0.0
+    reach = FOLLOW_EXCHANGING_PPM if signal.exchanging else FOLLOW_PPM
+    if abs(axis.step_ppm / shape_step_ppm - 1) > 1e-6:
+        length = max(round(shape.size * shape_step_ppm / axis.step_ppm), 2)
+        shape = np.asarray(
+            np.interp(np.linspace(0, shape.size - 1, length), np.arange(shape.size), shape),
+            np.float32,
+        )
+    start, _ = axis.span(signal.window)
+    first, reach_points = int(start), round(reach / abs(axis.step_ppm))
+    low, high = first - reach_points, first + shape.size + reach_points
+    if low < 0 or high > axis.size or reach_points < 1:
+        return 0.0
+    part = spectrum.intensities[low:high]
+    if part.max() < SHAPE_SNR * spectrum.noise_sd:
+        return 0.0
+    score = np.correlate(part, shape - shape.mean(), mode="valid")
+    best = int(np.argmax(score))
+    if best in (0, score.size - 1):
+        return 0.0  # the maximum lies outside the reach: something else stands there
+    left, mid, right = (float(v) for v in score[best - 1 : best + 2])
+    bend = left - 2 * mid + right
+    fraction = 0.5 * (left - right) / bend if bend < 0 else 0.0
+    return (best + fraction - reach_points) * axis.step_ppm
+
+
+def window_of(signal: Signal, offset_ppm: float) -> tuple[float, float]:
+    """Return the window as it was used, in ppm."""
+    return signal.window[0] + offset_ppm, signal.window[1] + offset_ppm
+
+
+def coverage(axis: Axis, signal: Signal) -> float:
+    """Return the part of a window that lies on the axis, 0 … 1."""
+    low, high = axis.span(signal.window)
+    inside = min(high, axis.size - 1.0) - max(low, 0.0)
+    return float(np.clip(inside / (high - low), 0.0, 1.0))
+
+
+def standard_errors(integrals: Integrals) -> Float64:
+    """Return the standard uncertainty of each integral, shape (k,)."""
+    return np.asarray(np.sqrt(np.diag(integrals.covariance)), np.float64)

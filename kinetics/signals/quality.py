@@ -1,0 +1,148 @@
+"""What is remarked on in a spectrum, with every threshold and its reason in one place."""
+
+import numpy as np
+
+from kinetics.remarks import Remark
+from kinetics.signals.calibration import Calibration
+from kinetics.signals.integrals import coverage, standard_errors
+from kinetics.signals.model import FollowPlan, Integrals
+from kinetics.spectra.model import Spectrum
+
+# An integral ratio good to 1 % wants S/N 150 to 250 of the reference line (memory: Malz & Jancke
+# 2005; Bharti & Roy 2012). Below 10 the line itself is in question.
+WEAK_REFERENCE_SNR = 50.0
+LOST_REFERENCE_SNR = 10.0
+# Twice the width at the start halves every height and lets neighbours run into each other.
+BROAD_FACTOR = 2.0
+# Phases of single lines scatter by 1–2° in clean spectra; 8° costs some per cent of an integral.
+PHASE_DISAGREEMENT_DEG = 8.0
+# More than this of the axis shift within a run is a lock jump or a temperature step.
+MOVED_PPM = 0.1
+# A negative integral beyond noise means phase or baseline, never chemistry.
+NEGATIVE_SIGMA = 5.0
+
+
+def remarks_on(
+    spectrum: Spectrum,
+    integrals: Integrals,
+    plan: FollowPlan,
+    calibration: Calibration,
+) -> tuple[Remark, ...]:
+    """Return what is to be remarked on in one measured spectrum.
+
+    Parameters
+    ----------
+    spectrum, integrals
+        The spectrum and what was measured in it.
+    plan, calibration
+        Of the run.
+    """
+    out: list[Remark] = list(spectrum.remarks)
+    out += _reference(spectrum, integrals, plan, calibration)
+    out += _phase(spectrum, plan)
+    errors = standard_errors(integrals)
+    offset = 0 if plan.reference is None else 1
+    biggest = float(np.max(np.abs(integrals.values))) if integrals.values.size else 0.0
+    for index, signal in enumerate(plan.all):
+        on_axis = coverage(spectrum.axis, signal)
+        if on_axis < 0.999:
+            out.append(
+                Remark(
+                    "window-off-axis",
+                    f"{100 * (1 - on_axis):.0f} % of the window of {signal.species} "
+                    f"({signal.window[1]:.2f} to {signal.window[0]:.2f} ppm) lies outside the "
+                    "spectrum.",
+                    "Its integral is too small.",
+                    "Correct the window in the sheet, or widen the spectral width.",
+                    doubtful=True,
+                    subject=signal.species,
+                )
+            )
+        value = integrals.values[index]
+        if index >= offset and value < -NEGATIVE_SIGMA * errors[index] and -value > 0.01 * biggest:
+            out.append(
+                Remark(
+                    "negative-integral",
+                    f"The integral of {signal.species} is negative by "
+                    f"{-value / errors[index]:.0f} times its noise.",
+                    "Phase or baseline is wrong there.",
+                    "Look at the spectrum; fix the phase or exclude the solvent in the sheet.",
+                    doubtful=True,
+                    subject=signal.species,
+                )
+            )
+    return tuple(out)
+
+
+def _reference(
+    spectrum: Spectrum,
+    integrals: Integrals,
+    plan: FollowPlan,
+    calibration: Calibration,
+) -> list[Remark]:
+    out: list[Remark] = []
+    if plan.reference is not None:
+        snr, name = float(integrals.heights[0]), plan.reference.species
+        relative = float(np.sqrt(integrals.covariance[0, 0]) / max(integrals.values[0], 1e-300))
+        if snr < LOST_REFERENCE_SNR or integrals.values[0] <= 0:
+            out.append(
+                Remark(
+                    "reference-lost",
+                    f"The reference {name} stands only {snr:.1f} times above the noise.",
+                    "No amount can be had from this spectrum.",
+                    "Check shim, lock and receiver, and the reference window in the sheet.",
+                    doubtful=True,
+                    subject=name,
+                )
+            )
+        elif snr < WEAK_REFERENCE_SNR:
+            out.append(
+                Remark(
+                    "reference-weak",
+                    f"The reference {name} stands {snr:.0f} times above the noise; its integral "
+                    f"is good to {100 * relative:.1f} %.",
+                    "Every amount of this spectrum carries that uncertainty.",
+                    "Take more scans, or a stronger reference.",
+                    subject=name,
+                )
+            )
+    usual = calibration.line_width_hz
+    if np.isfinite(usual) and spectrum.line_width_hz > BROAD_FACTOR * usual:
+        out.append(
+            Remark(
+                "lines-broad",
+                f"The reference line is {spectrum.line_width_hz:.2f} Hz wide, "
+                f"{spectrum.line_width_hz / usual:.1f} times its width at the start.",
+                "Neighbouring signals run into each other's windows.",
+                "Shim; check for bubbles and solids.",
+                doubtful=True,
+            )
+        )
+    moved = spectrum.record.shift_ppm - calibration.first_shift_ppm
+    if abs(moved) > MOVED_PPM:
+        out.append(
+            Remark(
+                "lines-moved",
+                f"All lines stand {abs(moved):.3f} ppm {'below' if moved > 0 else 'above'} their "
+                "place in the first spectrum.",
+                "The windows have followed.",
+                "Check lock and temperature.",
+            )
+        )
+    return out
+
+
+def _phase(spectrum: Spectrum, plan: FollowPlan) -> list[Remark]:
+    disagreement = spectrum.record.phase_disagreement_deg
+    if plan.settings.phase != "automatic" or disagreement <= PHASE_DISAGREEMENT_DEG:
+        return []
+    return [
+        Remark(
+            "phase-doubtful",
+            f"The lines do not agree on a phase: half of them are off by more than "
+            f"{disagreement:.0f}°.",
+            "Integrals may be off by several per cent.",
+            "Look at the spectrum; give a fixed phase or exclude the solvent in the sheet.",
+            doubtful=True,
+        )
+    ]

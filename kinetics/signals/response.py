@@ -1,0 +1,163 @@
+"""How a sum over a window answers to the area of a line, and how noisy it is.
+
+A sum over a window misses the tails outside it, takes in the tails of neighbours, and the
+baseline takes away part of what is left. All three are linear in the line areas: with the
+lines known from the calibration, sums = M · areas. Areas are M⁻¹ · sums, and the noise of the
+sums, baseline included, is carried along. For a Lorentzian and a window n widths wide the
+share inside is (2/π) arctan n (tests compare).
+"""
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+
+from kinetics.signals.model import FollowPlan
+from kinetics.signals.pattern import lorentzian_lines
+from kinetics.signals.windows import Weights, noise_covariance, window_weights
+from kinetics.spectra.baseline import BaselineOperator
+from kinetics.spectra.model import Axis, Float32, Float64
+
+# Line-widths relative to the calibration's at which M is prepared; in between it is interpolated.
+WIDTH_FACTORS = np.array([0.5, 0.7, 0.85, 1.0, 1.2, 1.5, 2.0, 3.0, 4.5])
+# A local straight baseline is used where the margins stand off zero by more than this part of
+# the integral, and by more than four standard deviations.
+_LOCAL_SHARE = 0.003
+_LOCAL_SIGNIFICANCE = 4.0
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Response:
+    """Answer of the window sums to line areas.
+
+    Attributes
+    ----------
+    mixing
+        float64, shape (f, k, k): M at each of `WIDTH_FACTORS`.
+    noise
+        float64, shape (k, k): covariance of the sums for unit noise of one point.
+    local_baseline
+        Whether each window has a local straight baseline of its own, length k.
+    line_width_ppm
+        Width at half height at factor 1.
+    """
+
+    mixing: Float64
+    noise: Float64
+    local_baseline: tuple[bool, ...]
+    line_width_ppm: float
+
+    def at_width(self, width_ppm: float) -> Float64:
+        """Return M for a line-width, shape (k, k)."""
+        factor = width_ppm / self.line_width_ppm
+        if not np.isfinite(factor):
+            factor = 1.0
+        place = np.interp(np.log(max(factor, 1e-6)), np.log(WIDTH_FACTORS), _PLACES)
+        left = min(int(place), WIDTH_FACTORS.size - 2)
+        share = place - left
+        return np.asarray((1 - share) * self.mixing[left] + share * self.mixing[left + 1])
+
+
+_PLACES = np.arange(WIDTH_FACTORS.size, dtype=np.float64)
+
+
+def make_response(
+    plan: FollowPlan,
+    axis: Axis,
+    corrected: Float32,
+    lines: Sequence[tuple[Float64, Float64]],
+    width_ppm: float,
+    baseline: BaselineOperator | None,
+    correlation: Float64,
+    sd: float,
+) -> Response:
+    """Prepare the response of a plan's windows.
+
+    Parameters
+    ----------
+    plan
+        What is followed.
+    axis, corrected
+        The mean spectrum of the calibration, baseline removed.
+    lines
+        Centres (ppm) and shares of the lines of each signal.
+    width_ppm
+        Width at half height of a line.
+    baseline
+        The baseline operator, None where no baseline is corrected.
+    correlation
+        Noise autocorrelation of the spectrum.
+    sd
+        Noise of one point of the mean spectrum.
+    """
+    whole = [window_weights(axis, s.window, local_baseline=False) for s in plan.all]
+    mixing = _mixing(axis, whole, lines, width_ppm * WIDTH_FACTORS, baseline)
+    sums = np.array([w.of(corrected) for w in whole])
+    factor_one = int(np.flatnonzero(WIDTH_FACTORS == 1.0)[0])
+    areas = np.linalg.solve(mixing[factor_one], sums)
+    local = _needs_local(plan, axis, corrected, lines, areas, width_ppm, correlation, sd)
+    if any(local):
+        whole = [
+            window_weights(axis, s.window, local_baseline=flag)
+            for s, flag in zip(plan.all, local, strict=True)
+        ]
+        mixing = _mixing(axis, whole, lines, width_ppm * WIDTH_FACTORS, baseline)
+    net = np.array([_net(w, axis.size, baseline) for w in whole])
+    return Response(mixing, noise_covariance(net, correlation), local, width_ppm)
+
+
+def _net(weights: Weights, size: int, baseline: BaselineOperator | None) -> Float64:
+    """Weights on the spectrum as it was before the baseline was taken off, shape (n,)."""
+    full = weights.full(size)
+    return full if baseline is None else full - baseline.transposed(full)
+
+
+def _mixing(
+    axis: Axis,
+    weights: Sequence[Weights],
+    lines: Sequence[tuple[Float64, Float64]],
+    widths_ppm: Float64,
+    baseline: BaselineOperator | None,
+) -> Float64:
+    out = np.empty((widths_ppm.size, len(weights), len(lines)))
+    net = np.array([_net(w, axis.size, baseline) for w in weights])
+    for which, width in enumerate(widths_ppm):
+        for column, (centres, shares) in enumerate(lines):
+            out[which, :, column] = net @ lorentzian_lines(axis, centres, shares, float(width))
+    return out
+
+
+def _needs_local(
+    plan: FollowPlan,
+    axis: Axis,
+    corrected: Float32,
+    lines: Sequence[tuple[Float64, Float64]],
+    areas: Float64,
+    width_ppm: float,
+    correlation: Float64,
+    sd: float,
+) -> tuple[bool, ...]:
+    """Whether the margins of each window stand off zero by more than the known lines explain."""
+    rest = corrected.astype(np.float64)
+    for area, (centres, shares) in zip(areas, lines, strict=True):
+        rest -= area * lorentzian_lines(axis, centres, shares, width_ppm)
+    # A product is not there yet in the first spectra: what it will become is judged by the
+    # largest of the other signals; the reference may be of any strength.
+    followed = list(zip(areas, plan.all, strict=True))[0 if plan.reference is None else 1 :]
+    per_proton = max((area / signal.protons for area, signal in followed), default=0.0)
+    flags = []
+    for area, signal in zip(areas, plan.all, strict=True):
+        straight = window_weights(axis, signal.window, local_baseline=True).full(axis.size)
+        plain = window_weights(axis, signal.window, local_baseline=False).full(axis.size)
+        under = float((plain - straight) @ rest)
+        noise = sd * float(
+            np.sqrt(noise_covariance((plain - straight)[None, :], correlation)[0, 0])
+        )
+        size = area if signal is plan.reference else max(area, per_proton * signal.protons)
+        flags.append(
+            not signal.exchanging
+            and size > 0
+            and abs(under) > _LOCAL_SHARE * size
+            and abs(under) > _LOCAL_SIGNIFICANCE * noise
+        )
+    return tuple(flags)
