@@ -24,7 +24,7 @@ from kinetics.sheet import Sheet, parse_sheet
 from kinetics.signals.amounts import concentrations
 from kinetics.signals.model import Concentrations
 from kinetics.spectra.clock import ClockSettings, Timeline, timeline
-from kinetics.spectra.model import Float64
+from kinetics.spectra.model import Float64, Stamp
 from kinetics.version import __version__
 
 STATES = ("measured", "doubtful", "set-aside", "unreadable")
@@ -193,6 +193,7 @@ class Run:
             laws=tuple(k.laws) if laws is None else laws,
             fit_from_s=from_s,
             fit_to_s=k.fit_to_s,
+            fit_origin_s=0.0 if k.fit_from_s is not None else from_s or 0.0,
             confidence=k.confidence,
             target_conversion=k.target_conversion,
         )
@@ -204,13 +205,14 @@ class Run:
             return self.sheet.kinetics.fit_from_s, "fit_from_s in the sheet"
         if self.started is None:
             return None, "the first spectrum"
-        zone, found = ZoneInfo(self.zone), (None, "the first spectrum")
-        for event in self.sheet.events:
-            if event.kind in ("start", "dose"):
-                at = (_aware(event.at, zone) - self.started).total_seconds()
-                if at > 0 and (found[0] is None or at > found[0]):
-                    found = (at, f"the last {event.kind}")
-        return found
+        zone = ZoneInfo(self.zone)
+        later = [
+            ((_aware(event.at, zone) - self.started).total_seconds(), event.kind)
+            for event in self.sheet.events
+            if event.kind in ("start", "dose")
+        ]
+        at, kind = max(later, default=(0.0, ""))
+        return (at, f"the last {kind}") if at > 0 else (None, "the first spectrum")
 
     @property
     def temperature_k(self) -> float | None:
@@ -309,8 +311,6 @@ def fit_document(run: Run, result: Study) -> dict[str, Any]:
 
 
 def _timeline(entries: tuple[Entry, ...], sheet: Sheet, zone: str) -> Timeline:
-    from kinetics.spectra.model import Stamp
-
     missing = Stamp(None, None, None, None, "unreadable")
     settings = ClockSettings(
         zone=zone,
@@ -339,9 +339,6 @@ def _aware(moment: datetime, zone: ZoneInfo) -> datetime:
 def seconds_since(start: datetime | None, moments: tuple[datetime | None, ...]) -> Float64:
     """Return seconds from a start, nan where a moment is unknown, shape (n,)."""
     return np.array(
-        [
-            np.nan if t is None or start is None else (t - start).total_seconds()
-            for t in moments
-        ],
+        [np.nan if t is None or start is None else (t - start).total_seconds() for t in moments],
         np.float64,
     )

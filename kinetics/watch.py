@@ -98,9 +98,12 @@ class Follower:
     def _sheet_in_force(self) -> _Work:
         """Take up a changed sheet file; return the work by the newest sheet of the record."""
         sheet, text = read_sheet(self.sheet_path)
-        seen, newest = self.record.connection.execute(
-            "SELECT value FROM meta WHERE key = 'sheet_file'"
-        ).fetchone(), self.record.newest_sheet()
+        seen, newest = (
+            self.record.connection.execute(
+                "SELECT value FROM meta WHERE key = 'sheet_file'"
+            ).fetchone(),
+            self.record.newest_sheet(),
+        )
         digest, file_name = fingerprint(text), str(self.sheet_path)
         file_changed = seen is None or str(seen[0]) != digest
         if newest is not None and file_changed and seen is not None:

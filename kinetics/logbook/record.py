@@ -70,12 +70,27 @@ class Record:
 
     def remember(self, key: str, value: str) -> str:
         """Freeze a value at its first use and return what is frozen."""
-        row = self.connection.execute("SELECT value FROM meta WHERE key = ?", (key,)).fetchone()
-        if row is not None:
-            return str(row[0])
+        known = self.meta(key)
+        if known is not None:
+            return known
         with transaction(self.connection):
             self.connection.execute("INSERT OR IGNORE INTO meta VALUES (?, ?)", (key, value))
         return value
+
+    def meta(self, key: str) -> str | None:
+        """Return what is noted under a key."""
+        row = self.connection.execute("SELECT value FROM meta WHERE key = ?", (key,)).fetchone()
+        return None if row is None else str(row[0])
+
+    def set_meta(self, key: str, value: str) -> None:
+        """Note a value that may change."""
+        with transaction(self.connection):
+            self.connection.execute("INSERT OR REPLACE INTO meta VALUES (?, ?)", (key, value))
+
+    def picture_range(self, low: float, high: float) -> tuple[float, float]:
+        """Freeze the ppm range of the picture at its first use and return what is frozen."""
+        frozen = self.remember("picture", f"{low:.6f} {high:.6f}").split()
+        return float(frozen[0]), float(frozen[1])
 
     def newest_sheet(self) -> tuple[int, str, str] | None:
         """Return version, text and origin of the newest sheet."""
@@ -177,6 +192,31 @@ class Record:
             (calibration,),
         )
         return [(int(row[0]), str(row[1]), str(row[2])) for row in rows]
+
+    def count_measured(self, calibration: int) -> int:
+        """Return how many spectra have a row of a calibration."""
+        row = self.connection.execute(
+            "SELECT count(*) FROM measured WHERE calibration = ?", (calibration,)
+        ).fetchone()
+        return int(row[0])
+
+    def has_measurements(self) -> bool:
+        """Whether anything has been measured, with any calibration."""
+        return self.connection.execute("SELECT 1 FROM measured LIMIT 1").fetchone() is not None
+
+    def is_complete(self, calibration: int) -> bool:
+        """Whether `complete_calibration` was called."""
+        row = self.connection.execute(
+            "SELECT complete FROM calibrations WHERE id = ?", (calibration,)
+        ).fetchone()
+        return bool(row and row[0])
+
+    def readable(self) -> list[tuple[str, str]]:
+        """Return (source, sha256) of all readable spectra that were not replaced."""
+        rows = self.connection.execute(
+            "SELECT source, sha256 FROM spectra WHERE readable = 1 AND superseded = 0 ORDER BY id"
+        )
+        return [(str(row[0]), str(row[1])) for row in rows]
 
     def first_measured(self, calibration: int, count: int) -> list[tuple[str, str]]:
         """Return (source, sha256) of the first spectra that were measured."""
