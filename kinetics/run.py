@@ -342,3 +342,39 @@ def seconds_since(start: datetime | None, moments: tuple[datetime | None, ...]) 
         [np.nan if t is None or start is None else (t - start).total_seconds() for t in moments],
         np.float64,
     )
+
+
+def fit_words(run: Run, result: Study) -> list[str]:
+    """Return what ``fit`` prints for people."""
+    from kinetics.rates.words import rounded, with_interval
+
+    counts = run.counts()
+    lines = [
+        run.sheet.title or run.logbook.name,
+        "spectra: " + ", ".join(f"{n} {state}" for state, n in counts.items() if n),
+        "",
+    ]
+    percent = f"{100 * result.question.confidence:g} %"
+    for f in result.fits:
+        lines.append(
+            f"{f.law}   {f.equation}   weight {result.weights[f.law]:.3f}   {f.points} spectra"
+        )
+        lines += [f"    {with_interval(p)}" for p in f.parameters]
+        half = f.half_life()
+        if np.isfinite(half.value):
+            ends = f"({rounded(half.low, half.value)} to {rounded(half.high, half.value)})"
+            lines.append(f"    half-life {rounded(half.value, half.low, half.high)} s {ends}")
+        lines += [f"    ! {remark}" for remark in f.diagnostics.remarks]
+    lines += ["", result.verdict, f"Intervals: {percent}, profile likelihood."]
+    if result.best.series.systematic:
+        lines.append(
+            f"Beside them, {100 * result.best.series.systematic:.2g} % standard uncertainty of the "
+            "reference's concentration: it scales amounts and second-order constants, "
+            "not first-order ones."
+        )
+    lines.append(
+        "An interval is that of this run; replicate runs usually scatter more (runs of the same "
+        "reaction have been seen to differ by 10 %)."
+    )
+    lines += [f"! {remark}" for remark in run.remarks()]
+    return lines

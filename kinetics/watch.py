@@ -8,7 +8,7 @@ import logging
 import os
 import time
 from collections.abc import Callable, Iterator, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from itertools import islice
 from pathlib import Path
 
@@ -98,17 +98,12 @@ class Follower:
     def _sheet_in_force(self) -> _Work:
         """Take up a changed sheet file; return the work by the newest sheet of the record."""
         sheet, text = read_sheet(self.sheet_path)
-        seen, newest = (
-            self.record.connection.execute(
-                "SELECT value FROM meta WHERE key = 'sheet_file'"
-            ).fetchone(),
-            self.record.newest_sheet(),
-        )
+        seen, newest = self.record.meta("sheet_file"), self.record.newest_sheet()
         digest, file_name = fingerprint(text), str(self.sheet_path)
-        file_changed = seen is None or str(seen[0]) != digest
+        file_changed = seen != digest
         if newest is not None and file_changed and seen is not None:
             in_record = fingerprint(newest[1])
-            if in_record not in (str(seen[0]), digest):
+            if in_record not in (seen, digest):
                 raise InputError(
                     f"{file_name}: the sheet was changed both here and in the logbook (version "
                     f"{newest[0]}); make the file equal to one of them first"
@@ -176,7 +171,9 @@ class Follower:
         """
         held = self._work.held_back
         batch = [
-            self._unreadable(source, raw, "no line stands out of its noise, nor of any before it")
+            self._unreadable(
+                source.signature, raw, "no line stands out of its noise, nor of any before it"
+            )
             for source, raw in held
         ]
         if batch:
@@ -230,7 +227,7 @@ class Follower:
             log.info("%s is not complete yet: %s", name, why)
             return
         except UnreadableError as why:
-            yield Taken(None, name, source.fallback_hash(), source.signature, None, str(why))
+            yield Taken(None, name, source.fallback_hash(root), source.signature, None, str(why))
             self._signatures[name] = source.signature
             return
         self._signatures[name] = source.signature
@@ -243,22 +240,22 @@ class Follower:
             work.held_back.append((source, raw))
             return
         for earlier_source, earlier in work.held_back:
-            yield self._row(earlier_source, earlier)
+            yield self._row(earlier_source.signature, earlier)
         work.held_back = []
-        yield self._row(source, raw)
+        yield self._row(source.signature, raw)
 
-    def _row(self, source: Source, raw: Raw) -> Taken:
+    def _row(self, signature: str, raw: Raw) -> Taken:
         assert self._work.calibration is not None
         recipe = Recipe(self._work.sheet_version, self._work.plan, self._work.calibration)
         try:
             measurement = measure(raw, recipe)
         except UnreadableError as why:
-            return self._unreadable(source, raw, str(why))
-        return Taken(raw, raw.source, raw.sha256, source.signature, measurement)
+            return self._unreadable(signature, raw, str(why))
+        return Taken(raw, raw.source, raw.sha256, signature, measurement)
 
     @staticmethod
-    def _unreadable(source: Source, raw: Raw, why: str) -> Taken:
-        return Taken(raw, raw.source, raw.sha256, source.signature, None, why)
+    def _unreadable(signature: str, raw: Raw, why: str) -> Taken:
+        return Taken(raw, raw.source, raw.sha256, signature, None, why)
 
     def _put(self, batch: Sequence[Taken]) -> None:
         if batch:
@@ -305,9 +302,8 @@ class Follower:
         """Measure with the calibration in hand whatever has not been, beside the old results."""
         work = self._work
         if work.calibration is None:
-            known = self.record.first_readable(1)
-            raw = self._again(*known[0]) if known else None
-            if raw is None or not self._start_calibration(raw):
+            again = (self._again(*entry) for entry in self.record.readable())
+            if not any(raw is not None and self._start_calibration(raw) for raw in again):
                 return
         identifier = work.calibration_id or 0
         if self.record.is_complete(identifier):
@@ -318,7 +314,7 @@ class Follower:
             for _, source, sha256 in chunk:
                 raw = self._again(source, sha256)
                 if raw is not None:
-                    batch.append(self._row(_source_of(raw), raw))
+                    batch.append(self._row(self._signatures.get(source, ""), raw))
             self._put([item for item in batch if item.measurement is not None])
         self.record.complete_calibration(identifier)
         self._maybe_recalibrate()
@@ -331,10 +327,14 @@ class Follower:
                     for raw in read(root, Source.named(root, source.removeprefix(prefix))):
                         if raw.sha256 == sha256:
                             return _renamed(raw, prefix)
-                except (UnreadableError, NotYetError) as why:
+                except (UnreadableError, NotYetError, OSError) as why:
                     log.warning("%s cannot be read again: %s", source, why)
         log.warning("%s has gone or changed; its earlier result stays", source)
         return None
+
+
+def _renamed(raw: Raw, prefix: str) -> Raw:
+    return replace(raw, source=prefix + raw.source) if prefix else raw
 
 
 def _batches(

@@ -218,6 +218,15 @@ class Record:
         )
         return [(str(row[0]), str(row[1])) for row in rows]
 
+    def state_counts(self) -> dict[str, int]:
+        """Return how many spectra ended in each state, by their latest measurement."""
+        rows = self.connection.execute(
+            "SELECT COALESCE((SELECT state FROM measured WHERE spectrum = id "
+            "ORDER BY calibration DESC LIMIT 1), 'unreadable') AS state, count(*) "
+            "FROM spectra WHERE superseded = 0 GROUP BY 1 ORDER BY 1"
+        )
+        return {str(row[0]): int(row[1]) for row in rows}
+
     def first_measured(self, calibration: int, count: int) -> list[tuple[str, str]]:
         """Return (source, sha256) of the first spectra that were measured."""
         rows = self.connection.execute(

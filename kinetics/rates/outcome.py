@@ -139,11 +139,12 @@ def forecast(
         span = max(float(fit.series.time_s[-1]) - fit.model.origin_s, 1.0)
         times.append(fit.time_to(name, (1 - target) * basis, _HORIZON_SPANS * span))
     value = times[list(in_play).index(best)] if best in in_play else NOTHING
-    lows = [t.low for t in times if np.isfinite(t.low)]
+    lows = [float(t.low) for t in times if np.isfinite(t.low)]
     # A law by which the target is never reached leaves the forecast open above.
     highs = [float(t.high) for t in times]
-    bounded = bool(highs) and all(np.isfinite(h) for h in highs)
-    high = max(highs) if bounded else float("nan")
+    high = max(highs, default=float("nan"))
+    if not all(np.isfinite(h) for h in highs):
+        high = float("nan")
     return Forecast(target, reached, Quantity(value.value, min(lows, default=float("nan")), high))
 
 
