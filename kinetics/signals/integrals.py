@@ -9,6 +9,9 @@ from kinetics.spectra.model import Axis, Float32, Float64, Spectrum
 
 # A signal's own drift against the reference is followed this far, in ppm.
 FOLLOW_PPM = 0.025
+# A signal is followed only while it still looks like itself; fading, it is soon outshone by
+# whatever else stands in its window.
+LIKENESS = 0.85
 # An exchanging proton wanders farther.
 FOLLOW_EXCHANGING_PPM = 0.05
 
@@ -63,7 +66,8 @@ def own_drift(spectrum: Spectrum, signal: Signal, shape: Float32, shape_step_ppm
     """Return how far a signal has moved against the reference since the calibration, in ppm.
 
     The signal's mean shape is laid over the spectrum by correlation, to a fraction of a point.
-    A signal too weak to be seen keeps its place beside the reference: zero.
+    A signal too weak to be seen, or no longer like itself, keeps its place beside the reference:
+    zero.
     """
     axis = spectrum.axis
     if not signal.follow or shape.size < 8:
@@ -87,10 +91,20 @@ def own_drift(spectrum: Spectrum, signal: Signal, shape: Float32, shape_step_ppm
     best = int(np.argmax(score))
     if best in (0, score.size - 1):
         return 0.0  # the maximum lies outside the reach: something else stands there
+    under = part[best : best + shape.size].astype(np.float64)
+    if _likeness(under, shape.astype(np.float64)) < LIKENESS:
+        return 0.0
     left, mid, right = (float(v) for v in score[best - 1 : best + 2])
     bend = left - 2 * mid + right
     fraction = 0.5 * (left - right) / bend if bend < 0 else 0.0
     return (best + fraction - reach_points) * axis.step_ppm
+
+
+def _likeness(a: Float64, b: Float64) -> float:
+    """Correlation coefficient of two stretches of equal length."""
+    a, b = a - a.mean(), b - b.mean()
+    size = float(np.sqrt((a @ a) * (b @ b)))
+    return float(a @ b) / size if size > 0 else 0.0
 
 
 def window_of(signal: Signal, offset_ppm: float) -> tuple[float, float]:
