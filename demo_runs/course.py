@@ -11,7 +11,7 @@ from functools import lru_cache
 
 import numpy as np
 import numpy.typing as npt
-from scipy.integrate import solve_ivp
+from scipy.integrate import OdeSolution, solve_ivp
 
 Float64 = npt.NDArray[np.float64]
 Pairs = tuple[tuple[str, float], ...]
@@ -74,7 +74,7 @@ class Course:
         if closed is not None:
             return closed
         horizon = float(2.0 ** np.ceil(np.log2(max(float(time.max(initial=0.0)), 1.0))))
-        table = _integrated(self, horizon, time.ravel().tobytes())
+        table = np.asarray(_integrated(self, horizon)(time.ravel()), np.float64)
         return dict(zip(self.species, table.reshape(len(self.species), *time.shape), strict=True))
 
     def mean(self, start_s: float, end_s: float) -> dict[str, float]:
@@ -115,7 +115,7 @@ def _closed_form(course: Course, time: Float64) -> dict[str, Float64] | None:
     if len(step.consumed) != 1 or len(step.rate_orders) != 1:
         return None
     (reactant, coefficient), (driver, order) = step.consumed[0], step.rate_orders[0]
-    if driver != reactant:
+    if driver != reactant or reactant in dict(step.formed):
         return None
     start = dict(course.initial)
     amount = start.get(reactant, 0.0)
@@ -136,9 +136,8 @@ def _closed_form(course: Course, time: Float64) -> dict[str, Float64] | None:
 
 
 @lru_cache(maxsize=64)
-def _integrated(course: Course, horizon_s: float, packed_times: bytes) -> Float64:
-    """Amounts by numerical integration, shape (species, times); tolerance 1e-11 relative."""
-    times = np.frombuffer(packed_times, np.float64)
+def _integrated(course: Course, horizon_s: float) -> OdeSolution:
+    """The numerical solution up to the horizon, shape (species, times) when called with times."""
     names = course.species
     place = {name: i for i, name in enumerate(names)}
     start = np.array([dict(course.initial).get(name, 0.0) for name in names])
@@ -156,9 +155,9 @@ def _integrated(course: Course, horizon_s: float, packed_times: bytes) -> Float6
     solution = solve_ivp(
         slope, (0.0, horizon_s), start, "LSODA", dense_output=True, rtol=1e-11, atol=1e-14
     )
-    if not solution.success:
+    if not solution.success or solution.sol is None:
         raise ValueError(f"the true course cannot be integrated: {solution.message}")
-    return np.asarray(solution.sol(times), np.float64)
+    return solution.sol
 
 
 def _rate(step: Step, amounts: Float64, place: Mapping[str, int]) -> float:

@@ -75,7 +75,7 @@ def simulate_fid(
     coarse = np.exp(np.multiply.outer(np.arange(blocks) * _BLOCK, rate)) * start
     fine = np.exp(np.multiply.outer(rate, np.arange(_BLOCK)))
     fid = (coarse @ fine).ravel()[:points]
-    time = np.arange(points) * dwell
+    time = np.arange(points, dtype=np.float64) * dwell
     for shim in shims:
         if shim != _PERFECT:
             fid = fid * shim.envelope(time)

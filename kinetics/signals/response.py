@@ -22,7 +22,7 @@ from kinetics.spectra.model import Axis, Float32, Float64
 WIDTH_FACTORS = np.array([0.5, 0.7, 0.85, 1.0, 1.2, 1.5, 2.0, 3.0, 4.5])
 # A local straight baseline is used where the margins stand off zero by more than this part of
 # the integral, and by more than four standard deviations.
-_LOCAL_SHARE = 0.003
+_LOCAL_SHARE = 0.01
 _LOCAL_SIGNIFICANCE = 4.0
 
 
