@@ -144,6 +144,7 @@ def packed(values: Int64) -> list[str]:
     lines: list[str] = []
     at = 0
     while True:
+        begun = at
         line = f"{at} {_pseudo(numbers[at], _SQUEEZED)}"
         last, repeats = "", 1
         while at + 1 < len(numbers) and len(line) + len(last) < _LINE:
@@ -154,11 +155,9 @@ def packed(values: Int64) -> list[str]:
                 line += last + (_repeat(repeats) if repeats > 1 else "")
                 last, repeats = step, 1
             at += 1
-        line += last + (_repeat(repeats) if repeats > 1 else "")
-        lines.append(line)
-        if at + 1 >= len(numbers):
-            # A closing line that repeats the last point, so that it can be checked too.
-            lines.append(f"{at} {_pseudo(numbers[at], _SQUEEZED)}")
+        lines.append(line + last + (_repeat(repeats) if repeats > 1 else ""))
+        if at == begun:
+            # The check of the last point, or a lone point, after which there is nothing to check.
             return lines
 
 

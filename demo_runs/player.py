@@ -131,6 +131,8 @@ def main(arguments: Sequence[str] | None = None) -> int:
         asked.folder.mkdir(parents=True, exist_ok=True)
         if any(asked.folder.iterdir()):
             line.error(f"{asked.folder} is not empty; give a folder without spectra")
+        if asked.sheet is not None and asked.sheet.parent.resolve() == asked.folder.resolve():
+            line.error(f"{asked.sheet} would lie in the run folder; it belongs beside it")
         if asked.sheet is not None:
             write_sheet(asked.sheet, started)
     except ValueError as error:

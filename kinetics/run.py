@@ -20,7 +20,7 @@ from kinetics.rates.question import Question
 from kinetics.rates.series import Series
 from kinetics.rates.study import Study, document, study
 from kinetics.remarks import Remark
-from kinetics.sheet import Sheet, parse_sheet
+from kinetics.sheet import Event, Sheet, parse_sheet
 from kinetics.signals.amounts import concentrations
 from kinetics.signals.model import Concentrations
 from kinetics.spectra.clock import ClockSettings, Timeline, timeline
@@ -378,3 +378,15 @@ def fit_words(run: Run, result: Study) -> list[str]:
     )
     lines += [f"! {remark}" for remark in run.remarks()]
     return lines
+
+
+def event_times(run: Run) -> list[tuple[float, Event]]:
+    """Return (s since the start, event) of the sheet's events, in order of time."""
+    if run.started is None:
+        return []
+    zone = ZoneInfo(run.zone)
+    pairs = [
+        ((_aware(event.at, zone) - run.started).total_seconds(), event)
+        for event in run.sheet.events
+    ]
+    return sorted(pairs, key=lambda pair: pair[0])

@@ -80,7 +80,10 @@ def outcome(fit: Fit | None, question: Question, unit: str) -> Outcome:
     left, left_slope = fit.amount_at(name, end)
     gone = 1.0 - left / basis
     gone_slope = -left_slope / basis + left * basis_slope / basis**2
-    conversion = _interval(fit, gone, gone_slope)
+    # Against a charge the uncertainty of the reference's concentration counts; against the fitted
+    # start it cancels.
+    shared = fit.series.systematic if known else 0.0
+    conversion = _interval(fit, gone, gone_slope, shared * (1.0 - gone))
     yields, selectivity = {}, {}
     a = float(question.consumed.get(name, 1.0))
     for product, p in question.formed.items():
@@ -91,19 +94,26 @@ def outcome(fit: Fit | None, question: Question, unit: str) -> Outcome:
         factor = a / p
         found = made * factor / basis
         found_slope = slope * factor / basis - found * basis_slope / basis
-        yields[product] = _interval(fit, found, found_slope)
+        yields[product] = _interval(fit, found, found_slope, shared * found)
         clear = conversion.low > 0.02
         ratio = found / gone if clear else float("nan")
         selectivity[product] = (
-            _interval(fit, ratio, found_slope / gone - ratio * gone_slope / gone)
+            _interval(
+                fit,
+                ratio,
+                found_slope / gone - ratio * gone_slope / gone,
+                shared * (ratio + ratio * (1.0 - gone) / gone),
+            )
             if clear
             else NOTHING
         )
     return Outcome(name, "charged" if known else "fitted start", conversion, yields, selectivity)
 
 
-def _interval(fit: Fit, value: float, slope: Float64) -> Quantity:
-    half = fit.t_quantile * float(np.sqrt(max(slope @ fit.estimate.covariance @ slope, 0.0)))
+def _interval(fit: Fit, value: float, slope: Float64, systematic_u: float) -> Quantity:
+    """Interval from the parameters' covariance and a systematic standard uncertainty."""
+    variance = float(slope @ fit.estimate.covariance @ slope)
+    half = fit.t_quantile * float(np.sqrt(max(variance, 0.0) + systematic_u**2))
     return Quantity(value, value - half, value + half)
 
 

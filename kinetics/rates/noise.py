@@ -1,0 +1,264 @@
+"""The covariance of what a law leaves: stated, and estimated where the scatter demands it.
+
+The stated covariance of each spectrum (noise of the windows and of the shared reference) is a
+block. Where the scatter about the fit is larger than it says, two further parts are estimated by
+restricted maximum likelihood (Patterson & Thompson, Biometrika 58 (1971) 545; average-information
+steps of Gilmour, Thompson & Cullis, Biometrics 51 (1995) 1440): a white part equal for all
+values, and a shared part proportional to the values (a wandering reference). Neighbouring
+spectra may further be correlated, AR(1), also estimated.
+"""
+
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from kinetics.errors import FitError
+from kinetics.rates.series import Float64
+
+_HIGHEST_CORRELATION = 0.97
+_FLOOR = 1e-8  # of the residual variance: an estimated part below ten times this is none
+_STEPS = 30
+_LONGEST_STEP = 2.0  # in the logarithm of a variance
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Whitener:
+    """Turns residuals of shape (n, m) into uncorrelated ones of unit variance.
+
+    Attributes
+    ----------
+    inverse
+        Inverse Cholesky factor of each block, shape (n, m, m).
+    log_det
+        Logarithm of the determinant of the whole covariance.
+    white, shared
+        Variances of the extra white part (amount²) and of the shared relative part.
+    rho
+        Correlation of neighbouring spectra.
+    """
+
+    inverse: Float64
+    log_det: float
+    white: float = 0.0
+    shared: float = 0.0
+    rho: float = 0.0
+
+    @property
+    def extra_parts(self) -> int:
+        """Number of variance parts that were estimated."""
+        return sum(1 for part in (self.white, self.shared, self.rho) if part)
+
+    def apply(self, values: Float64) -> Float64:
+        """Whiten residuals, shape (n, m) → (n, m)."""
+        return self._innovations(lower_times(self.inverse, values[:, :, None])[:, :, 0])
+
+    def apply_jacobian(self, jacobian: Float64) -> Float64:
+        """Whiten a Jacobian, shape (n, m, p) → (n m, p)."""
+        whitened = self._innovations(lower_times(self.inverse, jacobian))
+        return whitened.reshape(-1, jacobian.shape[2])
+
+    def _innovations(self, values: Float64) -> Float64:
+        """Take from each spectrum what the one before it foretells."""
+        if self.rho == 0.0 or values.shape[0] < 2:
+            return values
+        out = np.array(values)
+        out[1:] = (values[1:] - self.rho * values[:-1]) / np.sqrt(1 - self.rho**2)
+        return out
+
+    def correlated(self, rho: float) -> "Whitener":
+        """Return the whitener for neighbouring spectra correlated by `rho` (AR(1))."""
+        spectra, species = self.inverse.shape[0], self.inverse.shape[1]
+        plain = self.log_det - species * (spectra - 1) * np.log1p(-(self.rho**2))
+        log_det = plain + species * (spectra - 1) * np.log1p(-(rho**2))
+        return replace(self, log_det=float(log_det), rho=rho)
+
+
+def lower_times(lower: Float64, right: Float64) -> Float64:
+    """Multiply lower triangular blocks (n, m, m) by (n, m, p).
+
+    Written out over the few species: many small matrix products cost more than the arithmetic.
+    """
+    out = np.empty_like(right)
+    for i in range(lower.shape[1]):
+        total = lower[:, i, 0, None] * right[:, 0]
+        for j in range(1, i + 1):
+            total = total + lower[:, i, j, None] * right[:, j]
+        out[:, i] = total
+    return out
+
+
+def whitener(
+    covariance: Float64, white: float = 0.0, shared: float = 0.0, curve: Float64 | None = None
+) -> Whitener:
+    """Build a whitener from the stated covariance and the extra parts.
+
+    Raises
+    ------
+    FitError
+        If a covariance is not positive definite.
+    """
+    total = covariance
+    if white:
+        total = total + white * np.eye(covariance.shape[1])
+    if shared and curve is not None:
+        total = total + shared * curve[:, :, None] * curve[:, None, :]
+    try:
+        lower = np.linalg.cholesky(total)
+    except np.linalg.LinAlgError:
+        raise FitError("the covariance of a spectrum's amounts is not positive definite") from None
+    diagonal = np.einsum("nii->ni", lower)
+    return Whitener(inverse_lower(lower), 2.0 * float(np.log(diagonal).sum()), white, shared)
+
+
+def inverse_lower(lower: Float64) -> Float64:
+    """Invert lower triangular blocks, shape (n, m, m), by forward substitution."""
+    out = np.zeros_like(lower)
+    size = lower.shape[1]
+    for i in range(size):
+        out[:, i, i] = 1.0 / lower[:, i, i]
+        for j in range(i):
+            total = (lower[:, i, j:i] * out[:, j:i, j]).sum(axis=1)
+            out[:, i, j] = -total * out[:, i, i]
+    return out
+
+
+def lag_one(whitened: Float64) -> float:
+    """Return the correlation of neighbouring residuals, pooled over the species, shape (n, m)."""
+    total = float((whitened**2).sum())
+    return float((whitened[1:] * whitened[:-1]).sum()) / total if total > 0 else 0.0
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class _Pieces:
+    """Restricted likelihood at trial variances: −2 ln L, its slope and average information."""
+
+    value: float
+    slope: Float64
+    information: Float64
+
+
+def extra_parts(
+    stated: Float64, rest: Float64, jacobian: Float64, curve: Float64
+) -> tuple[float, float]:
+    """Estimate the extra white and shared variances with the curve linearised about the fit.
+
+    Parameters
+    ----------
+    stated
+        Covariance of each spectrum, shape (n, m, m).
+    rest, curve
+        Residuals and fitted values, shape (n, m).
+    jacobian
+        Derivative of the curve, shape (n, m, p).
+
+    Returns
+    -------
+    white, shared
+        Zero where the data show no such part. The shared part is looked for only where more
+        than one species is observed: with one it cannot be told from other errors.
+    """
+    joint = curve.shape[1] > 1
+    excess = max(float(np.mean(rest**2)), 1e-300)
+    typical = float(np.mean(np.einsum("nii->ni", stated)))
+    unit = np.array([excess, excess / max(float(np.mean(curve**2)), 1e-300)])
+    begin = np.array([max(1.0 - typical / excess, 0.1), 0.1])[: 1 + joint]
+    unit = unit[: 1 + joint]
+    logs = np.log(begin)
+    limits = np.log(_FLOOR), np.log(100.0)
+    here = _pieces(np.exp(logs) * unit, stated, rest, jacobian, curve)
+    for _ in range(_STEPS):
+        theta = np.exp(logs) * unit
+        slope = here.slope * theta
+        information = here.information * np.outer(theta, theta)
+        ridge = 1e-9 + 1e-6 * np.trace(information)
+        move = -np.linalg.solve(information + ridge * np.eye(theta.size), slope)
+        longest = float(np.max(np.abs(move)))
+        move *= min(1.0, _LONGEST_STEP / max(longest, 1e-300))
+        for _ in range(8):
+            trial_logs = np.clip(logs + move, *limits)
+            trial = _pieces(np.exp(trial_logs) * unit, stated, rest, jacobian, curve)
+            if trial.value <= here.value + 1e-9:
+                break
+            move = move * 0.4
+        else:
+            break
+        moved = float(np.max(np.abs(trial_logs - logs)))
+        logs, here = trial_logs, trial
+        if moved < 1e-3:
+            break
+    theta = np.where(np.exp(logs) > 10 * _FLOOR, np.exp(logs) * unit, 0.0)
+    return float(theta[0]), float(theta[1]) if joint else 0.0
+
+
+def _pieces(
+    theta: Float64, stated: Float64, rest: Float64, jacobian: Float64, curve: Float64
+) -> _Pieces:
+    shared = float(theta[1]) if theta.size > 1 else 0.0
+    w = whitener(stated, float(theta[0]), shared, curve)
+    a, b = w.apply_jacobian(jacobian), w.apply(rest).ravel()
+    size = np.linalg.norm(a, axis=0)
+    a = a / np.where(size > 0, size, 1.0)
+    q, upper = np.linalg.qr(a)
+    left = b - q @ (q.T @ b)  # whitened P y
+    log_normal = 2 * float(np.log(np.maximum(np.abs(np.diag(upper)), 1e-300)).sum())
+    log_normal += 2 * float(np.log(np.maximum(size, 1e-300)).sum())
+    value = w.log_det + log_normal + float(left @ left)
+    # A part of the covariance, whitened, is G G' with G = L⁻¹ (white) or L⁻¹ c (shared).
+    n, m = rest.shape
+    left_rows, q_rows = left.reshape(n, m), q.reshape(n, m, -1)
+    columns = [w.inverse]
+    if theta.size > 1:
+        columns.append(lower_times(w.inverse, curve[:, :, None]))
+    slope, directions = [], []
+    for g in columns:
+        trace = float((g**2).sum()) - float((np.einsum("nmk,nmp->nkp", g, q_rows) ** 2).sum())
+        along = np.einsum("nmk,nm->nk", g, left_rows)
+        slope.append(trace - float((along**2).sum()))
+        directions.append(np.einsum("nmk,nk->nm", g, along).ravel())
+    stack = np.stack(directions, axis=1)
+    stack_left = stack - q @ (q.T @ stack)
+    return _Pieces(value, np.array(slope), stack.T @ stack_left)
+
+
+def correlation(w: Whitener, rest: Float64, jacobian: Float64) -> float:
+    """Estimate the correlation of neighbouring spectra by restricted maximum likelihood.
+
+    Parameters
+    ----------
+    w
+        Whitener of the single spectra.
+    rest, jacobian
+        Residuals, shape (n, m), and derivative of the curve, shape (n, m, p).
+    """
+    b = lower_times(w.inverse, rest[:, :, None])[:, :, 0]
+    a = lower_times(w.inverse, jacobian)
+    grid = np.linspace(0.0, _HIGHEST_CORRELATION, 25)
+    costs = [_ar_objective(rho, a, b) for rho in grid]
+    best = int(np.argmin(costs))
+    low, high = grid[max(best - 1, 0)], grid[min(best + 1, grid.size - 1)]
+    for _ in range(20):  # golden section inside the bracket
+        left, right = high - 0.618 * (high - low), low + 0.618 * (high - low)
+        if _ar_objective(left, a, b) < _ar_objective(right, a, b):
+            high = right
+        else:
+            low = left
+    return float(0.5 * (low + high))
+
+
+def _ar_objective(rho: float, a: Float64, b: Float64) -> float:
+    """−2 ln of the restricted likelihood at a correlation, the residual variance profiled out."""
+    n, m = b.shape
+    root = np.sqrt(1 - rho**2)
+    y, x = np.array(b), np.array(a)
+    y[1:] = (b[1:] - rho * b[:-1]) / root
+    x[1:] = (a[1:] - rho * a[:-1]) / root
+    flat_y, flat_x = y.ravel(), x.reshape(n * m, -1)
+    size = np.linalg.norm(flat_x, axis=0)
+    flat_x = flat_x / np.where(size > 0, size, 1.0)
+    q, upper = np.linalg.qr(flat_x)
+    left = float(flat_y @ flat_y) - float(((q.T @ flat_y) ** 2).sum())
+    log_normal = 2 * float(np.log(np.maximum(np.abs(np.diag(upper)), 1e-300)).sum())
+    log_normal += 2 * float(np.log(np.maximum(size, 1e-300)).sum())
+    dof = n * m - a.shape[2]
+    log_det = m * (n - 1) * float(np.log1p(-(rho**2)))
+    return log_det + log_normal + dof * float(np.log(max(left, 1e-300)))
