@@ -48,7 +48,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
             if not _answers(address, server, stop):
                 print("the dashboard did not start", file=sys.stderr)
                 return 0 if stop.asked else 1
-            _announce(address, demo, options.no_browser)
+            _announce(f"{address}/now?run=demo" if demo else address, demo, options.no_browser)
             while not stop.asked and server.poll() is None:
                 time.sleep(0.2)
             return 0 if stop.asked else 1
@@ -129,7 +129,7 @@ def _start_server(home: Path, logbooks: Path, port: int) -> subprocess.Popen[byt
 
 
 def _start_demo(logbooks: Path, pace_s: float, count: int) -> list[subprocess.Popen[bytes]]:
-    """Start the player and the follower of the demo run."""
+    """Start the player and the follower of the demo run, and measure the finished night."""
     run_folder, sheet = logbooks / "run", logbooks / "demo.toml"
     run_folder.mkdir()
     player = [sys.executable, "-m", "demo_runs.player", str(run_folder), "--pace", str(pace_s)]
@@ -143,7 +143,14 @@ def _start_demo(logbooks: Path, pace_s: float, count: int) -> list[subprocess.Po
     following = subprocess.Popen(
         follower, stdout=subprocess.DEVNULL, stderr=subprocess.DEVNULL, start_new_session=True
     )
-    return [playing, following]
+    night = files("demo_runs") / "finished"
+    finished = [sys.executable, "-m", "kinetics", "watch", str(night / "run"), "--once"]
+    finished += ["--sheet", str(night / "finished.toml")]
+    finished += ["--logbook", str(logbooks / "finished-night.logbook")]
+    measuring = subprocess.Popen(
+        finished, stdout=subprocess.DEVNULL, stderr=subprocess.DEVNULL, start_new_session=True
+    )
+    return [playing, following, measuring]
 
 
 def _answers(address: str, server: subprocess.Popen[bytes], stop: _Stop) -> bool:

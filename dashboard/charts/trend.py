@@ -105,7 +105,8 @@ def _curves(
 
 
 def _events(figure: go.Figure, run: Run, look: Look, t_unit: float) -> None:
-    shapes, notes = [], []
+    shapes: list[dict[str, object]] = []
+    notes: list[dict[str, object]] = []
     for seconds, event in event_times(run):
         x = seconds / t_unit
         shapes.append(

@@ -74,6 +74,5 @@ def _list() -> None:
     if chosen:
         st.query_params["run"] = names[chosen[0]]
         st.session_state["run"] = names[chosen[0]]
-        st.success(f"{names[chosen[0]]} is chosen; open **Now** to see it.")
-    else:
-        st.caption("Choose a row, then open Now.")
+        st.switch_page("now")
+    st.caption("Choose a row to open the run.")

@@ -9,7 +9,7 @@ from scipy.stats import norm
 from scipy.stats import t as student
 
 from kinetics.errors import FitError
-from kinetics.rates.estimate import Estimate, Problem, estimate, is_correlated, lag_one
+from kinetics.rates.estimate import Estimate, Problem, estimate
 from kinetics.rates.laws import Array, law_named, unit_of
 from kinetics.rates.model import Model, make_model
 from kinetics.rates.profile import Profile, profile
@@ -18,6 +18,8 @@ from kinetics.rates.series import Float64, Series
 from kinetics.remarks import Remark
 
 _STEP = 1e-30
+# Below this number of values a drift is not told from plain scatter.
+_FEW_FOR_DRIFT = 50
 
 
 @dataclass(frozen=True, slots=True)
@@ -335,19 +337,7 @@ def runs_p(whitened: Float64) -> float:
 
 def _diagnostics(model: Model, found: Estimate, parameters: tuple[Parameter, ...]) -> Diagnostics:
     remarks: list[Remark] = []
-    correlation = lag_one(found.whitened)
-    correlated = is_correlated(found.whitened, model.size)
-    rho = found.whitener.rho
-    if rho > 0:
-        remarks.append(
-            Remark(
-                "residuals-correlated",
-                f"Neighbouring points lie on the same side of the curve (correlation {rho:.2f}).",
-                "The intervals allow for it, but may still be too narrow; either the law is "
-                "wrong or reference, phase or temperature drift.",
-                "Look at the residuals; a second signal of the same species tells which.",
-            )
-        )
+    remarks += noise_remarks(found)
     for p in parameters:
         if np.isnan(p.low) or np.isnan(p.high):
             sides = [s for s, v in (("below", p.low), ("above", p.high)) if np.isnan(v)]
@@ -362,4 +352,35 @@ def _diagnostics(model: Model, found: Estimate, parameters: tuple[Parameter, ...
                     subject=p.name,
                 )
             )
-    return Diagnostics(correlation, correlated, runs_p(found.whitened), tuple(remarks))
+    return Diagnostics(
+        found.plain_correlation, found.correlated, runs_p(found.whitened), tuple(remarks)
+    )
+
+
+def noise_remarks(found: Estimate) -> list[Remark]:
+    """Say where the scatter about the fit is not what intervals are made for."""
+    remarks = []
+    if found.correlated:
+        remarks.append(
+            Remark(
+                "residuals-correlated",
+                "Neighbouring points lie on the same side of the curve "
+                f"(correlation {found.plain_correlation:.2f}).",
+                "The intervals allow for it, but may still be too narrow; either the law is "
+                "wrong or reference, phase or temperature drift.",
+                "Look at the residuals; a second signal of the same species tells which.",
+            )
+        )
+    count = found.whitened.size
+    if found.whitener.extra_parts and count < _FEW_FOR_DRIFT and np.isfinite(found.excess):
+        remarks.append(
+            Remark(
+                "scatter-unexplained",
+                f"The points scatter {np.sqrt(found.excess):.1f} times as much as the noise of "
+                "the spectra explains.",
+                f"With {found.whitened.shape[0]} spectra it cannot be told whether that is a "
+                "drift, and a drift makes the intervals too narrow.",
+                "Follow longer or more often, and look at the reference.",
+            )
+        )
+    return remarks

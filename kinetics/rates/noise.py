@@ -18,6 +18,8 @@ from kinetics.rates.series import Float64
 _HIGHEST_CORRELATION = 0.97
 _FLOOR = 1e-8  # of the residual variance: an estimated part below ten times this is none
 _STEPS = 30
+_CLOSE = 5e-3  # in the logarithm of a variance; its own standard error is far larger
+_PART = 400  # spectra that show where to start
 _LONGEST_STEP = 2.0  # in the logarithm of a variance
 
 
@@ -138,7 +140,11 @@ class _Pieces:
 
 
 def extra_parts(
-    stated: Float64, rest: Float64, jacobian: Float64, curve: Float64
+    stated: Float64,
+    rest: Float64,
+    jacobian: Float64,
+    curve: Float64,
+    begin: tuple[float, float] | None = None,
 ) -> tuple[float, float]:
     """Estimate the extra white and shared variances with the curve linearised about the fit.
 
@@ -150,6 +156,8 @@ def extra_parts(
         Residuals and fitted values, shape (n, m).
     jacobian
         Derivative of the curve, shape (n, m, p).
+    begin
+        Where to start; default: from what a part of the spectra shows.
 
     Returns
     -------
@@ -161,9 +169,14 @@ def extra_parts(
     excess = max(float(np.mean(rest**2)), 1e-300)
     typical = float(np.mean(np.einsum("nii->ni", stated)))
     unit = np.array([excess, excess / max(float(np.mean(curve**2)), 1e-300)])
-    begin = np.array([max(1.0 - typical / excess, 0.1), 0.1])[: 1 + joint]
+    part = max(rest.shape[0] // _PART, 1)
+    if begin is None and part > 1:
+        begin = extra_parts(stated[::part], rest[::part], jacobian[::part], curve[::part])
+    at = np.array([max(1.0 - typical / excess, 0.1), 0.1])
+    if begin is not None:
+        at = np.maximum(np.array(begin) / unit, _FLOOR)
     unit = unit[: 1 + joint]
-    logs = np.log(begin)
+    logs = np.log(at[: 1 + joint])
     limits = np.log(_FLOOR), np.log(100.0)
     here = _pieces(np.exp(logs) * unit, stated, rest, jacobian, curve)
     for _ in range(_STEPS):
@@ -184,7 +197,7 @@ def extra_parts(
             break
         moved = float(np.max(np.abs(trial_logs - logs)))
         logs, here = trial_logs, trial
-        if moved < 1e-3:
+        if moved < _CLOSE:
             break
     theta = np.where(np.exp(logs) > 10 * _FLOOR, np.exp(logs) * unit, 0.0)
     return float(theta[0]), float(theta[1]) if joint else 0.0

@@ -34,6 +34,8 @@ class Series:
         ``"mol/L"``, ``"ratio"`` or ``"per scan"``.
     labels
         Name of each spectrum, length n.
+    stated
+        False where nothing is known of the errors and `covariance` only says how they compare.
     """
 
     time_s: Float64
@@ -44,6 +46,7 @@ class Series:
     systematic: float
     unit: str
     labels: tuple[str, ...]
+    stated: bool = True
 
     @property
     def size(self) -> int:
@@ -62,6 +65,7 @@ class Series:
             self.systematic,
             self.unit,
             tuple(self.labels[i] for i in index),
+            self.stated,
         )
 
 
@@ -133,4 +137,5 @@ def make_series(
         systematic,
         unit,
         tuple(names[i] for i in order),
+        covariance is not None or standard_uncertainty is not None,
     )

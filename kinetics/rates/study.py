@@ -127,7 +127,7 @@ def _preferred(fits: list[Fit], in_play: list[Fit], failed: Mapping[str, str]) -
         if p.name in best.model.law.rates
     )
     alone = len(in_play) == 1 and not failed
-    steady = best.estimate.whitener.rho == 0.0 and not best.diagnostics.correlated
+    steady = not best.diagnostics.correlated
     return best.law if alone and steady and bounded else None
 
 

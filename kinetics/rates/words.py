@@ -79,7 +79,7 @@ def verdict(
             )
         else:
             words += " A run at another starting concentration would decide."
-    elif best.estimate.whitener.rho > 0:
+    elif best.diagnostics.correlated:
         words = (
             f"{best.law} fits best ({rates_in_words(best)}), but its residuals are correlated: "
             "the law may be wrong or something drifts, so no law is singled out."

@@ -20,7 +20,7 @@ import numpy as np
 from scipy.stats import t as student
 
 from kinetics.errors import FitError
-from kinetics.rates.estimate import Problem, estimate, finished, whitener
+from kinetics.rates.estimate import Problem, estimate
 from kinetics.rates.fitting import noise_remarks
 from kinetics.rates.laws import law_named
 from kinetics.rates.model import make_model
@@ -137,9 +137,9 @@ def bound(noise: str, clean: Series, x: Float64, law: str) -> float:
     lag = DRIFT_RHO ** np.abs(np.subtract.outer(np.arange(spectra), np.arange(spectra)))
     if noise == "drift":
         v = clean.values
-        whole += SD**2 * np.einsum("nm,ab,nb->nmab" if False else "nm,na,ab->nmab", v, lag, v)
+        whole += SD**2 * np.einsum("na,nm,mb->namb", v, lag, v)
     if noise == "drift-unstated":
-        whole = SD**2 * np.einsum("na,mb->nmab", lag, np.eye(count))
+        whole = SD**2 * np.einsum("nm,ab->namb", lag, np.eye(count))
     full = whole.reshape(spectra * count, spectra * count)
     model = make_model(law_named(law), clean, question_for(law))
     j = model.jacobian(x, clean.time_s, np.zeros(spectra)).reshape(-1, model.size)
@@ -164,7 +164,7 @@ def cell(law: str, noise: str, spectra: int, conversion: float, runs: int, seed:
             found = estimate(problem)
         except FitError:
             continue
-        warned += bool(noise_remarks(found, problem.model.size))
+        warned += bool(noise_remarks(found))
         p = profile(problem, found, 0, 0.95)
         if np.isfinite(p.low) and np.isfinite(p.high):
             closed += 1
