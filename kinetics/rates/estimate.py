@@ -15,6 +15,7 @@ from scipy.stats import chi2
 from kinetics.errors import FitError
 from kinetics.rates.model import Model, starts
 from kinetics.rates.noise import (
+    beyond_chance,
     Whitener,
     correlation,
     extra_parts,
@@ -31,11 +32,10 @@ _TRIED = 3  # the best starts that are followed to the end
 _FEW = 60  # spectra on which starts are tried
 # Extra parts are estimated only where the plain fit's scatter is unlikely by the stated errors.
 _EXCESS_P = 0.01
-_FEWEST_FOR_CORRELATION = 6
 # Correlation is allowed for from here on, in standard errors beyond chance; it is remarked on
 # from `_SURE_SD` on. The coverage study shows what both cost.
 _ALLOWED_SD = 0.8
-_SURE_SD = 1.645
+_SURE_SD = 1.5
 _HUGE = 1e150
 
 
@@ -170,18 +170,6 @@ class Problem:
         return self.search(min(found, key=lambda item: item[1])[0], w)
 
 
-def beyond_chance(whitened: Float64, parameters: int) -> float:
-    """Return the lag-one correlation in standard errors beyond what independent noise leaves.
-
-    A fit of p parameters makes residuals of independent noise negatively correlated, by about
-    p over the number of values; that is allowed for. −inf for too few spectra.
-    """
-    spectra, count = whitened.shape[0], whitened.size
-    if spectra < _FEWEST_FOR_CORRELATION:
-        return -np.inf
-    return float((lag_one(whitened) + parameters / count) * np.sqrt(count))
-
-
 def estimate(problem: Problem) -> Estimate:
     """Fit a model to a series.
 
@@ -205,10 +193,11 @@ def estimate(problem: Problem) -> Estimate:
             break
         w = whitener(base, *parts, curve)
         x, cost = problem.search(x, w)
-    plain = w.apply(problem.data - problem.predict(x))
-    distance = beyond_chance(plain, problem.model.size)
+    rest, jacobian = problem.data - problem.predict(x), problem.jacobian(x)
+    plain = w.apply(rest)
+    distance = beyond_chance(plain, w.apply_jacobian(jacobian))
     if distance > _ALLOWED_SD:
-        rho = correlation(w, problem.data - problem.predict(x), problem.jacobian(x))
+        rho = correlation(w, rest, jacobian)
         w = w.correlated(rho)
         x, cost = problem.search(x, w)
     if not np.all(np.isfinite(x)) or not np.isfinite(cost):

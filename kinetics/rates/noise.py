@@ -18,6 +18,7 @@ from kinetics.rates.series import Float64
 _HIGHEST_CORRELATION = 0.97
 _FLOOR = 1e-8  # of the residual variance: an estimated part below ten times this is none
 _STEPS = 30
+_FEWEST_SPECTRA, _FEWEST_DOF = 5, 4
 _CLOSE = 5e-3  # in the logarithm of a variance; its own standard error is far larger
 _PART = 400  # spectra that show where to start
 _LONGEST_STEP = 2.0  # in the logarithm of a variance
@@ -128,6 +129,47 @@ def lag_one(whitened: Float64) -> float:
     """Return the correlation of neighbouring residuals, pooled over the species, shape (n, m)."""
     total = float((whitened**2).sum())
     return float((whitened[1:] * whitened[:-1]).sum()) / total if total > 0 else 0.0
+
+
+def beyond_chance(whitened: Float64, slope: Float64) -> float:
+    """Return the lag-one correlation in standard errors beyond what independent noise leaves.
+
+    A fit makes residuals of independent noise negatively correlated; mean and variance of the
+    statistic under independence are exact (Durbin & Watson, Biometrika 37 (1950) 409).
+
+    Parameters
+    ----------
+    whitened
+        Shape (n, m).
+    slope
+        Whitened Jacobian, shape (n m, p).
+
+    Returns
+    -------
+    float
+        −inf for too few spectra.
+    """
+    n, m = whitened.shape
+    size = np.linalg.norm(slope, axis=0)
+    q = np.linalg.qr(slope[:, size > 0] / size[size > 0])[0]
+    dof = n * m - q.shape[1]
+    if n < _FEWEST_SPECTRA or dof < _FEWEST_DOF:
+        return -np.inf
+    shifted = _neighbours(q.reshape(n, m, -1)).reshape(n * m, -1)
+    inner = q.T @ shifted
+    first = -float(np.trace(inner))
+    second = 0.5 * m * (n - 1) - 2 * float((shifted**2).sum()) + float((inner**2).sum())
+    mean = first / dof
+    variance = 2 * (second - first**2 / dof) / (dof * (dof + 2))
+    return float((lag_one(whitened) - mean) / np.sqrt(variance)) if variance > 0 else -np.inf
+
+
+def _neighbours(rows: Float64) -> Float64:
+    """Half the sum of the rows before and after, shape (n, m, p)."""
+    out = np.zeros_like(rows)
+    out[1:] += 0.5 * rows[:-1]
+    out[:-1] += 0.5 * rows[1:]
+    return out
 
 
 @dataclass(frozen=True, slots=True, eq=False)
