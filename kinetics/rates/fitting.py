@@ -1,25 +1,22 @@
 """One law fitted to one series: parameters with intervals, and what they say."""
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import cached_property
 
 import numpy as np
 from scipy.optimize import brentq
-from scipy.stats import norm
 from scipy.stats import t as student
 
 from kinetics.errors import FitError
+from kinetics.rates.advise import law_remarks, outlier_remarks
+from kinetics.rates.diagnostics import Diagnostics, diagnose
 from kinetics.rates.estimate import Estimate, Problem, estimate
-from kinetics.rates.laws import Array, law_named, unit_of
+from kinetics.rates.laws import law_named, unit_of
 from kinetics.rates.model import Model, make_model
-from kinetics.rates.profile import Profile, profile
+from kinetics.rates.profile import Profile, profile, profile_curve
 from kinetics.rates.question import Question
+from kinetics.rates.scheme_model import SCHEME, scheme_model
 from kinetics.rates.series import Float64, Series
-from kinetics.remarks import Remark
-
-_STEP = 1e-30
-# Below this number of values a drift is not told from plain scatter.
-_FEW_FOR_DRIFT = 50
 
 
 @dataclass(frozen=True, slots=True)
@@ -57,28 +54,6 @@ class Quantity:
 
 
 NOTHING = Quantity(float("nan"), float("nan"), float("nan"))
-
-
-@dataclass(frozen=True, slots=True)
-class Diagnostics:
-    """What the residuals say.
-
-    Attributes
-    ----------
-    autocorrelation
-        Lag-one correlation of the whitened residuals.
-    correlated
-        Whether that is beyond chance.
-    runs_p
-        Two-sided p of the number of runs of one sign (Wald & Wolfowitz 1940), nan for few points.
-    remarks
-        In words.
-    """
-
-    autocorrelation: float
-    correlated: bool
-    runs_p: float
-    remarks: tuple[Remark, ...]
 
 
 @dataclass(frozen=True, eq=False)
@@ -148,6 +123,11 @@ class Fit:
         """Return a parameter by name."""
         return next(p for p in self.parameters if p.name == name)
 
+    def profile(self, name: str) -> Profile:
+        """Return the profile of a parameter over three standard errors, for a picture."""
+        index = self.model.names.index(name)
+        return profile_curve(*_by_itself(self.problem, self.estimate, index), index)
+
     def curve(self, time_s: Float64) -> tuple[Float64, Float64, Float64]:
         """Return the fitted amounts of the observed species and their confidence band.
 
@@ -172,16 +152,7 @@ class Fit:
 
     def amount_at(self, species: str, time_s: float) -> tuple[float, Float64]:
         """Return an amount at a time and its derivative by the vector, shape (p,)."""
-
-        def value(x: Array) -> Array:
-            return self.model.amounts(x, np.array([time_s]))[species] + 0 * np.array([time_s])
-
-        slope = np.empty(self.model.size)
-        for i in range(self.model.size):
-            stepped = np.array(self.estimate.x, complex)
-            stepped[i] += 1j * _STEP
-            slope[i] = float(np.imag(value(stepped)[0]) / _STEP)
-        return float(np.real(value(self.estimate.x)[0])), slope
+        return self.model.amount_at(self.estimate.x, species, time_s)
 
     def time_to(self, species: str, amount: float, horizon_s: float) -> Quantity:
         """Return when a consumed species has fallen to an amount, s since the run's start.
@@ -216,11 +187,11 @@ class Fit:
             k, a = self.parameters[0], dict(self.model.mechanism.reactants)[name]
             return Quantity(*(np.log(2) / (a * v) for v in (k.value, k.high, k.low)))
         begin = self.amount_at(name, self.model.origin_s)[0]
-        shifted = self._time_to_share(name, 0.5)
+        shifted = self.time_to_share(name, 0.5)
         return shifted if begin > 0 else NOTHING
 
-    def _time_to_share(self, species: str, share: float) -> Quantity:
-        """Time since the fit's origin until a species has fallen to a share of its start.
+    def time_to_share(self, species: str, share: float) -> Quantity:
+        """Return the time since the fit's origin until a share of a species is left.
 
         Unlike `time_to` the goal moves with the fitted starting amount.
         """
@@ -244,7 +215,7 @@ class Fit:
         return Quantity(after, after / factor, after * factor)
 
 
-def fit(series: Series, law: str, question: Question) -> Fit:
+def fit(series: Series, law: str, question: Question, as_stated: bool = False) -> Fit:
     """Fit one law.
 
     Parameters
@@ -252,9 +223,12 @@ def fit(series: Series, law: str, question: Question) -> Fit:
     series
         Amounts against time.
     law
-        Name of the law, as in the sheet.
+        Name of the law, as in the sheet; ``"scheme"`` for the question's mass-action steps.
     question
         What is asked; its `laws` are not looked at.
+    as_stated
+        Take the stated covariance up to a factor (ordinary weighted least squares) and do not
+        look for further scatter or correlation.
 
     Raises
     ------
@@ -262,32 +236,42 @@ def fit(series: Series, law: str, question: Question) -> Fit:
         If the data do not allow the fit.
     InputError
         If the question does not name what the law needs.
+
+    Examples
+    --------
+    >>> from kinetics.rates.series import make_series
+    >>> amounts = [0.905, 0.819, 0.741, 0.670, 0.607, 0.549]
+    >>> series = make_series([100, 200, 300, 400, 500, 600], amounts, ["ester"])
+    >>> k = fit(series, "first-order", Question({"ester": 1})).parameter("k")
+    >>> f"{k.value:.3g} {k.unit}"
+    '0.001 1/s'
     """
-    chosen = law_named(law)
     part = in_range(series, question)
-    model = make_model(chosen, part, question)
+    if law == SCHEME:
+        model: Model = scheme_model(part, question)
+        chosen = model.law
+    else:
+        chosen = law_named(law)
+        model = make_model(chosen, part, question)
     problem = Problem(model, part)
-    found = estimate(problem)
-    profiles = tuple(profile(problem, found, i, question.confidence) for i in range(model.size))
-    natural = model.to_natural(found.x)
-    slope = np.array(
-        [
-            natural[i] if model.is_log(i) else (1.0 if i < len(chosen.rates) else model.scale)
-            for i in range(model.size)
-        ]
+    found = estimate(problem, as_stated)
+    profiles = tuple(
+        profile(*_by_itself(problem, found, i), i, question.confidence) for i in range(model.size)
     )
-    errors = np.sqrt(np.maximum(np.diag(found.covariance), 0.0)) * slope
+    natural = model.to_natural(found.x)
+    slope = model.natural_slope(found.x)
+    errors = np.sqrt(np.maximum(np.diag(slope @ found.covariance @ slope.T), 0.0))
     parameters = tuple(
         Parameter(
             name,
             unit_of(name, chosen, series.unit),
-            float(natural[i]),
-            float(errors[i]),
-            profiles[i].low,
-            profiles[i].high,
+            # Noise may turn a reverse rate near zero negative; nature does not.
+            *_not_negative(name, float(natural[i]), float(errors[i]), profiles[i]),
         )
         for i, name in enumerate(model.names)
     )
+    judged = diagnose(found, {p.name: (p.low, p.high) for p in parameters})
+    more = law_remarks(model) + outlier_remarks(problem, found)
     return Fit(
         law=law,
         equation=chosen.equation,
@@ -297,8 +281,33 @@ def fit(series: Series, law: str, question: Question) -> Fit:
         estimate=found,
         parameters=parameters,
         profiles=profiles,
-        diagnostics=_diagnostics(model, found, parameters),
+        diagnostics=replace(judged, remarks=(*judged.remarks, *more)),
     )
+
+
+def _by_itself(problem: Problem, found: Estimate, index: int) -> tuple[Problem, Estimate]:
+    """Return problem and minimum with the vector laid out so that an element is a parameter."""
+    model = problem.model
+    if index or model.rate_scale == 1.0:
+        return problem, found
+    plain = replace(model, rate_scale=1.0)
+    turn = np.eye(model.size)
+    turn[0, model.law.rates.index("order")] = -np.log(model.rate_scale)
+    moved = replace(
+        found,
+        x=plain.to_vector(model.to_natural(found.x)),
+        covariance=turn @ found.covariance @ turn.T,
+    )
+    return Problem(plain, problem.series), moved
+
+
+def _not_negative(
+    name: str, value: float, error: float, p: Profile
+) -> tuple[float, float, float, float]:
+    if name != "k_reverse":
+        return value, error, p.low, p.high
+    low = 0.0 if np.isnan(p.low) else max(p.low, 0.0)
+    return max(value, 0.0), error, low, max(p.high, 0.0) if np.isfinite(p.high) else p.high
 
 
 def in_range(series: Series, question: Question) -> Series:
@@ -316,71 +325,3 @@ def in_range(series: Series, question: Question) -> Series:
     if not inside.any():
         raise FitError(f"no spectrum lies in the range of the fit, from {low:g} s on")
     return series.select(inside)
-
-
-def runs_p(whitened: Float64) -> float:
-    """Return the two-sided p of the number of runs of one sign, pooled over the species."""
-    runs = expected = variance = 0.0
-    for column in whitened.T:
-        up = int((column > 0).sum())
-        down = column.size - up
-        total = up + down
-        if min(up, down) < 3:
-            continue
-        runs += 1 + int(np.count_nonzero(np.diff(column > 0)))
-        expected += 2 * up * down / total + 1
-        variance += 2 * up * down * (2 * up * down - total) / (total**2 * (total - 1))
-    if variance <= 0:
-        return float("nan")
-    return float(2 * norm.sf(abs(runs - expected) / np.sqrt(variance)))
-
-
-def _diagnostics(model: Model, found: Estimate, parameters: tuple[Parameter, ...]) -> Diagnostics:
-    remarks: list[Remark] = []
-    remarks += noise_remarks(found)
-    for p in parameters:
-        if np.isnan(p.low) or np.isnan(p.high):
-            sides = [s for s, v in (("below", p.low), ("above", p.high)) if np.isnan(v)]
-            remarks.append(
-                Remark(
-                    "not-bounded",
-                    f"The data do not bound {p.name} {' or '.join(sides)}.",
-                    "Only the other end of its interval means anything."
-                    if len(sides) == 1
-                    else "Its value means nothing.",
-                    "Follow the reaction further, or ask for a law with fewer parameters.",
-                    subject=p.name,
-                )
-            )
-    return Diagnostics(
-        found.plain_correlation, found.correlated, runs_p(found.whitened), tuple(remarks)
-    )
-
-
-def noise_remarks(found: Estimate) -> list[Remark]:
-    """Say where the scatter about the fit is not what intervals are made for."""
-    remarks = []
-    if found.correlated:
-        remarks.append(
-            Remark(
-                "residuals-correlated",
-                "Neighbouring points lie on the same side of the curve "
-                f"(correlation {found.plain_correlation:.2f}).",
-                "The intervals allow for it, but may still be too narrow; either the law is "
-                "wrong or reference, phase or temperature drift.",
-                "Look at the residuals; a second signal of the same species tells which.",
-            )
-        )
-    count = found.whitened.size
-    if found.whitener.extra_parts and count < _FEW_FOR_DRIFT and np.isfinite(found.excess):
-        remarks.append(
-            Remark(
-                "scatter-unexplained",
-                f"The points scatter {np.sqrt(found.excess):.1f} times as much as the noise of "
-                "the spectra explains.",
-                f"With {found.whitened.shape[0]} spectra it cannot be told whether that is a "
-                "drift, and a drift makes the intervals too narrow.",
-                "Follow longer or more often, and look at the reference.",
-            )
-        )
-    return remarks

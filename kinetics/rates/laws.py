@@ -72,6 +72,8 @@ class Law:
         The law in words and symbols, shown wherever k is shown.
     amounts
         (mechanism, rates, start, t) → amount of each species at times t.
+    units
+        Unit of each rate parameter where they differ; empty: all are of `unit`.
     """
 
     name: str
@@ -80,6 +82,7 @@ class Law:
     needs_start_of: int
     equation: str
     amounts: Callable[[Mechanism, Mapping[str, Array], Start, Array], dict[str, Array]]
+    units: tuple[str, ...] = ()
 
 
 def _by_extent(extent: Extent) -> Callable[..., dict[str, Array]]:
@@ -240,7 +243,7 @@ def unit_of(parameter: str, law: Law, amount_unit: str) -> str:
         return "1"
     if parameter not in law.rates:
         return amount_unit
-    form = law.unit
+    form = law.units[law.rates.index(parameter)] if law.units else law.unit
     if form == "1/(U s)":
         return "L/(mol s)" if amount_unit == "mol/L" else f"1/({amount_unit} s)"
     if form == "U/s":

@@ -16,6 +16,8 @@ _NODES = np.sqrt(3 / 5) * np.array([-0.5, 0.0, 0.5])
 _NODE_WEIGHTS = np.array([5.0, 8.0, 5.0]) / 18.0
 # Below this part of the span of the series an acquisition is a point in time.
 _POINT_LIKE = 0.002
+# Held as they are: from the logarithm of a reverse rate near zero a search does not come back.
+_PLAIN = ("order", "k_reverse")
 _STEP = 1e-30  # complex step; no cancellation, so it may be tiny
 
 
@@ -23,8 +25,8 @@ _STEP = 1e-30  # complex step; no cancellation, so it may be tiny
 class Model:
     """A law with its parameters laid out for a series.
 
-    The vector holds the logarithm of each positive rate parameter, `order` as it is, then the
-    starting amounts over `scale`.
+    The vector holds the logarithm of each positive rate parameter, `order` and `k_reverse` as they
+    are (noise may make the latter negative), then the starting amounts over `scale`.
 
     Attributes
     ----------
@@ -44,6 +46,9 @@ class Model:
         Time from which the law runs.
     scale
         Unit of the starting amounts in the vector.
+    rate_scale
+        Amount at which the vector holds the rate of a law with a free order, ln(k U^(n−1)): at an
+        amount the data show, rate and order are hardly correlated.
     """
 
     law: Law
@@ -55,6 +60,7 @@ class Model:
     columns: tuple[int, ...]
     origin_s: float
     scale: float
+    rate_scale: float = 1.0
 
     @property
     def size(self) -> int:
@@ -63,16 +69,17 @@ class Model:
 
     def is_log(self, index: int) -> bool:
         """Whether the vector holds the logarithm of a parameter."""
-        return index < len(self.law.rates) and self.law.rates[index] != "order"
+        return index < len(self.law.rates) and self.law.rates[index] not in _PLAIN
 
     def to_natural(self, x: Array) -> Array:
         """Turn a vector into parameter values, shape (p,)."""
+        count = len(self.law.rates)
         parts = []
         for i in range(self.size):
             if self.is_log(i):
-                parts.append(np.exp(x[i]))
+                parts.append(np.exp(x[i] - self._shift(x)))
             else:
-                parts.append(x[i] if i < len(self.law.rates) else x[i] * self.scale)
+                parts.append(x[i] if i < count else x[i] * self.scale)
         return np.array(parts)
 
     def to_vector(self, natural: Float64) -> Float64:
@@ -80,10 +87,22 @@ class Model:
         out = np.array(natural, np.float64)
         for i in range(self.size):
             if self.is_log(i):
-                out[i] = np.log(natural[i])
+                out[i] = np.log(natural[i]) + self._shift(natural)
             elif i >= len(self.law.rates):
                 out[i] = natural[i] / self.scale
         return out
+
+    def _shift(self, x: Array) -> Array:
+        """Logarithm of U^(n−1); `order` is the same in the vector and by itself."""
+        if self.rate_scale == 1.0 or "order" not in self.law.rates:
+            return 0.0
+        return (x[self.law.rates.index("order")] - 1.0) * np.log(self.rate_scale)
+
+    def natural_slope(self, x: Float64) -> Float64:
+        """Return the derivative of `to_natural`, shape (p, p)."""
+        steps = x.astype(complex)[:, None] + 1j * _STEP * np.eye(x.size)
+        columns = [self.to_natural(steps[:, i]).imag / _STEP for i in range(x.size)]
+        return np.stack(columns, axis=1)
 
     def parts(self, x: Array) -> tuple[dict[str, Array], dict[str, Array]]:
         """Return rates and starting amounts as dictionaries."""
@@ -98,6 +117,20 @@ class Model:
         """Return the amount of every species of the mechanism at times since the run's start."""
         rates, start = self.parts(x)
         return self.law.amounts(self.mechanism, rates, start, time_s - self.origin_s)
+
+    def amount_at(self, x: Float64, species: str, time_s: float) -> tuple[float, Float64]:
+        """Return the amount of a species at a time and its derivative by the vector, shape (p,)."""
+        at = np.array([time_s])
+        slope = np.empty(self.size)
+        for i in range(self.size):
+            stepped = np.array(x, complex)
+            stepped[i] += 1j * _STEP
+            slope[i] = float(np.imag((self.amounts(stepped, at)[species] + 0 * at)[0]) / _STEP)
+        return float(np.real((self.amounts(x, at)[species] + 0 * at)[0])), slope
+
+    def starts(self, series: Series) -> list[Float64]:
+        """Return starting vectors from the data."""
+        return starts(self, series)
 
     def predict(self, x: Array, time_s: Float64, acquisition_s: Float64) -> Array:
         """Return the observed amounts averaged over each acquisition, shape (n, m)."""
@@ -126,8 +159,8 @@ def averages(time_s: Float64, acquisition_s: Float64) -> bool:
     """Whether acquisitions are long enough that the law must be averaged over them."""
     if time_s.size < 2:
         return False
-    span = float(np.ptp(time_s))
-    return span > 0 and float(np.max(acquisition_s)) > _POINT_LIKE * span
+    longest = float(acquisition_s.max())
+    return longest > 0 and longest > _POINT_LIKE * float(np.ptp(time_s)) > 0
 
 
 def make_model(law: Law, series: Series, question: Question) -> Model:
@@ -149,9 +182,10 @@ def make_model(law: Law, series: Series, question: Question) -> Model:
     observed = tuple(s for s in series.species if s in mechanism.species)
     if not observed:
         raise FitError(f"{law.name}: none of its species is observed in the spectra")
-    free, fixed = list(observed), {}
+    fixed = {s: float(v) for s, v in question.known_start.items() if s in mechanism.species}
+    free = [s for s in observed if s not in fixed]
     for place, (name, _) in enumerate(mechanism.reactants):
-        if name in observed:
+        if name in observed or name in fixed:
             continue
         if name in question.charged and series.unit == "mol/L":
             fixed[name] = float(question.charged[name])
@@ -179,6 +213,7 @@ def make_model(law: Law, series: Series, question: Question) -> Model:
         columns=tuple(series.species.index(name) for name in observed),
         origin_s=question.fit_origin_s,
         scale=scale,
+        rate_scale=scale if "order" in law.rates else 1.0,
     )
 
 
@@ -212,7 +247,8 @@ def starts(model: Model, series: Series) -> list[Float64]:
     out = []
     positive = [name for name in model.law.rates if name != "order"]
     for start in beginnings:
-        size = max(float(np.max(np.abs(start))), 1e-12)
+        size = float(np.max(np.abs(start))) if start.size else model.scale
+        size = max(size, 1e-12)
         for rate in np.geomspace(0.01, 300.0, 16) / span:
             for second in (0.1, 1.0, 10.0) if len(positive) > 1 else (1.0,):
                 for order in (0.5, 1.5, 2.5) if "order" in model.law.rates else (1.0,):

@@ -144,10 +144,13 @@ def forecast(
     charged = question.charged.get(name, 0.0)
     times = []
     for fit in in_play:
-        known = unit == "mol/L" and charged > 0
-        basis = charged if known else fit.amount_at(name, fit.model.origin_s)[0]
-        span = max(float(fit.series.time_s[-1]) - fit.model.origin_s, 1.0)
-        times.append(fit.time_to(name, (1 - target) * basis, _HORIZON_SPANS * span))
+        origin = fit.model.origin_s
+        span = max(float(fit.series.time_s[-1]) - origin, 1.0)
+        if unit == "mol/L" and charged > 0:
+            times.append(fit.time_to(name, (1 - target) * charged, _HORIZON_SPANS * span))
+        else:  # the goal moves with the fitted start
+            t = fit.time_to_share(name, 1 - target)
+            times.append(Quantity(origin + t.value, origin + t.low, origin + t.high))
     value = times[list(in_play).index(best)] if best in in_play else NOTHING
     lows = [float(t.low) for t in times if np.isfinite(t.low)]
     # A law by which the target is never reached leaves the forecast open above.

@@ -19,6 +19,7 @@ from kinetics.rates.series import Float64
 # Searched this many standard errors away, and to a factor e^7 ≈ 1000 for a rate constant.
 _FARTHEST_SE = 60.0
 _FARTHEST_LOG = 7.0
+_FARTHEST_ORDER = 20.0
 _CLOSE = 1e-6  # relative, of the t-scaled distance
 _NEWTON_STEPS = 12
 
@@ -93,7 +94,8 @@ def profile_curve(problem: Problem, found: Estimate, index: int, reach: float = 
 def _natural(problem: Problem, x: Float64, index: int, value: float) -> float:
     moved = np.array(x)
     moved[index] = value
-    return float(problem.model.to_natural(moved)[index])
+    with np.errstate(all="ignore"):
+        return float(problem.model.to_natural(moved)[index])
 
 
 def _root(cost: float, found: Estimate) -> float:
@@ -114,10 +116,13 @@ def _end(
     farthest = _FARTHEST_SE * goal * error if np.isfinite(error) else np.inf
     if problem.model.is_log(index):
         farthest = min(farthest, _FARTHEST_LOG) if np.isfinite(farthest) else _FARTHEST_LOG
+    if problem.model.names[index] == "order":
+        farthest = min(farthest, _FARTHEST_ORDER)
     if not np.isfinite(farthest) or farthest <= 0:
         return None
     quick = _newton_end(problem, found, index, sign, goal)
-    if quick is not None and abs(quick - centre) <= farthest:
+    # An end much closer than the quadratic says is a search gone astray, not an end.
+    if quick is not None and 0.05 * goal * error < sign * (quick - centre) <= farthest:
         points.append((quick, sign * goal))
         return quick
     return _bracketed_end(problem, found, index, (sign, goal, farthest), points)

@@ -27,6 +27,9 @@ class Question:
         Species to which half-life, conversion and yield refer; None: the first consumed.
     charged
         Amounts put in, mol/L; species not seen in the spectrum may stand here.
+    known_start
+        Starting amounts, in the unit of the series, that are taken as known and not fitted (a
+        product known to be absent). What that costs or gains shows in the interval of k.
     fit_from_s, fit_to_s
         Range of the fit in s since the start; None: open.
     fit_origin_s
@@ -49,6 +52,7 @@ class Question:
     fit_origin_s: float = 0.0
     confidence: float = 0.95
     target_conversion: float | None = None
+    known_start: Mapping[str, float] = field(default_factory=dict)
 
     @property
     def limiting_species(self) -> str | None:

@@ -2,14 +2,17 @@
 
 from collections.abc import Mapping
 from dataclasses import dataclass, replace
+from functools import cached_property
 from typing import Any
 
 import numpy as np
 
-from kinetics.errors import FitError, InputError
+from kinetics.errors import FitError
 from kinetics.rates.fitting import Fit, Quantity, fit, in_range
 from kinetics.rates.outcome import Balance, Forecast, Outcome, balance, forecast, outcome
+from kinetics.rates.progress import Change, Progress, changes, progress
 from kinetics.rates.question import Question, check_laws
+from kinetics.rates.scheme_model import SCHEME
 from kinetics.rates.series import Series
 from kinetics.rates.words import verdict
 from kinetics.remarks import Remark
@@ -61,6 +64,16 @@ class Study:
         """Return the fit of a law, None if it could not be fitted or was not asked for."""
         return next((f for f in self.fits if f.law == law), None)
 
+    @cached_property
+    def progress(self) -> Progress:
+        """Whether the reaction is over or has levelled off."""
+        return progress(self.best.series, self.question)
+
+    @cached_property
+    def changes(self) -> tuple[Change, ...]:
+        """What changed along the run: rate, stall, a step of the reference."""
+        return changes(self.best)
+
     @property
     def remarks(self) -> tuple[Remark, ...]:
         """Remarks of the likeliest fit."""
@@ -76,15 +89,20 @@ def study(series: Series, question: Question) -> Study:
         If no law can be fitted; the message says why.
     InputError
         If the laws exclude each other, or a law lacks what it needs.
+
+    Examples
+    --------
+    >>> from kinetics.rates.series import make_series
+    >>> times = [100, 300, 500, 800, 1200, 1600, 2000, 2400]
+    >>> amounts = [0.904, 0.742, 0.607, 0.449, 0.302, 0.201, 0.136, 0.090]
+    >>> series = make_series(times, amounts, ["ester"], standard_uncertainty=0.002)
+    >>> found = study(series, Question({"ester": 1}, laws=("first-order", "second-order")))
+    >>> found.preferred
+    'first-order'
     """
     check_laws(question)
-    if question.scheme:
-        raise InputError(
-            "kinetics.scheme: fitting a scheme of steps is not built yet in this version; "
-            "give laws instead"
-        )
     fits, failed = [], {}
-    for law in question.laws:
+    for law in (SCHEME,) if question.scheme else question.laws:
         try:
             fits.append(fit(series, law, question))
         except FitError as why:
@@ -93,8 +111,8 @@ def study(series: Series, question: Question) -> Study:
         raise FitError("; ".join(failed.values()) or "no law was asked for")
     fits.sort(key=lambda f: f.aicc)
     aicc = np.array([f.aicc for f in fits])
-    finite = np.isfinite(aicc)
-    relative = np.where(finite, np.exp(-0.5 * (aicc - aicc[0])) if finite[0] else 1.0, 0.0)
+    # With too few points for the criterion no law is likelier than another.
+    relative = np.exp(-0.5 * (aicc - aicc[0])) if np.isfinite(aicc[0]) else np.ones(aicc.size)
     weights = {f.law: float(w) for f, w in zip(fits, relative / relative.sum(), strict=True)}
     in_play = [f for f in fits if not f.aicc - fits[0].aicc > IN_PLAY_DELTA]
     preferred = _preferred(fits, in_play, failed)
@@ -164,6 +182,16 @@ def document(result: Study) -> dict[str, Any]:
             "reached": result.forecast.reached,
             "time_s": quantity(result.forecast.time_s),
         },
+        "progress": {
+            "state": result.progress.state,
+            "conversion": plain(result.progress.conversion),
+            "remainder_high": plain(result.progress.remainder_high),
+            "words": result.progress.words,
+        },
+        "changes": [
+            {"kind": c.kind, "time_s": c.time_s, "noticed_s": c.noticed_s, "words": c.words}
+            for c in result.changes
+        ],
         "balance": None
         if result.balance is None
         else {"mean": plain(result.balance.mean), "worst": plain(result.balance.worst)},

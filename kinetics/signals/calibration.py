@@ -115,6 +115,7 @@ def calibrate(raws: Sequence[Raw], plan: FollowPlan, version: int = 1) -> Calibr
         corrected,
         lines,
         width_ppm,
+        [_own_width(corrected, axis, signal, sd, width_ppm) for signal in plan.all],
         None if settings.baseline == "none" else baseline_operator_for(axis, settings, occupied),
         first.noise_correlation,
         sd,
@@ -231,6 +232,25 @@ def _line_width(corrected: Float32, axis: Axis, shift: float, plan: FollowPlan, 
                 return width
             widths.append(width)
     return min(widths, default=4.0 * abs(axis.step_ppm))
+
+
+def _own_width(
+    corrected: Float32, axis: Axis, signal: Signal, sd: float, reference_ppm: float
+) -> float:
+    """Width of a signal's highest line where it can be seen, else that of the reference line.
+
+    Shim is common to all lines; a signal that seems broader than the reference consists of lines
+    that run into each other, unless its proton exchanges.
+    """
+    place, height = _top(corrected, axis, signal)
+    if height < SHAPE_SNR * sd:
+        return reference_ppm
+    limit = max(round(0.15 / abs(axis.step_ppm)), 8)
+    line = LinePosition(axis.position(place), height)
+    width = width_at_half(corrected, line, limit) * abs(axis.step_ppm)
+    if not np.isfinite(width):
+        return reference_ppm
+    return width if signal.exchanging else min(width, reference_ppm)
 
 
 def _top(corrected: Float32, axis: Axis, signal: Signal) -> tuple[float, float]:

@@ -39,7 +39,7 @@ class Response:
     local_baseline
         Whether each window has a local straight baseline of its own, length k.
     line_width_ppm
-        Width at half height at factor 1.
+        Width at half height of the reference line at factor 1.
     """
 
     mixing: Float64
@@ -67,6 +67,7 @@ def make_response(
     corrected: Float32,
     lines: Sequence[tuple[Float64, Float64]],
     width_ppm: float,
+    own_widths_ppm: Sequence[float],
     baseline: BaselineOperator | None,
     correlation: Float64,
     sd: float,
@@ -82,7 +83,9 @@ def make_response(
     lines
         Centres (ppm) and shares of the lines of each signal.
     width_ppm
-        Width at half height of a line.
+        Width at half height of the reference line.
+    own_widths_ppm
+        Width of the lines of each signal, in the order of the plan.
     baseline
         The baseline operator, None where no baseline is corrected.
     correlation
@@ -91,17 +94,17 @@ def make_response(
         Noise of one point of the mean spectrum.
     """
     whole = [window_weights(axis, s.window, local_baseline=False) for s in plan.all]
-    mixing = _mixing(axis, whole, lines, width_ppm * WIDTH_FACTORS, baseline)
+    mixing = _mixing(axis, whole, lines, own_widths_ppm, baseline)
     sums = np.array([w.of(corrected) for w in whole])
     factor_one = int(np.flatnonzero(WIDTH_FACTORS == 1.0)[0])
     areas = np.linalg.solve(mixing[factor_one], sums)
-    local = _needs_local(plan, axis, corrected, lines, areas, width_ppm, correlation, sd)
+    local = _needs_local(plan, axis, corrected, lines, areas, own_widths_ppm, correlation, sd)
     if any(local):
         whole = [
             window_weights(axis, s.window, local_baseline=flag)
             for s, flag in zip(plan.all, local, strict=True)
         ]
-        mixing = _mixing(axis, whole, lines, width_ppm * WIDTH_FACTORS, baseline)
+        mixing = _mixing(axis, whole, lines, own_widths_ppm, baseline)
     net = np.array([_net(w, axis.size, baseline) for w in whole])
     return Response(mixing, noise_covariance(net, correlation), local, width_ppm)
 
@@ -116,14 +119,15 @@ def _mixing(
     axis: Axis,
     weights: Sequence[Weights],
     lines: Sequence[tuple[Float64, Float64]],
-    widths_ppm: Float64,
+    own_widths_ppm: Sequence[float],
     baseline: BaselineOperator | None,
 ) -> Float64:
-    out = np.empty((widths_ppm.size, len(weights), len(lines)))
+    out = np.empty((WIDTH_FACTORS.size, len(weights), len(lines)))
     net = np.array([_net(w, axis.size, baseline) for w in weights])
-    for which, width in enumerate(widths_ppm):
-        for column, (centres, shares) in enumerate(lines):
-            out[which, :, column] = net @ lorentzian_lines(axis, centres, shares, float(width))
+    for column, ((centres, shares), own) in enumerate(zip(lines, own_widths_ppm, strict=True)):
+        for which, factor in enumerate(WIDTH_FACTORS):
+            shape = lorentzian_lines(axis, centres, shares, own * float(factor))
+            out[which, :, column] = net @ shape
     return out
 
 
@@ -133,14 +137,14 @@ def _needs_local(
     corrected: Float32,
     lines: Sequence[tuple[Float64, Float64]],
     areas: Float64,
-    width_ppm: float,
+    own_widths_ppm: Sequence[float],
     correlation: Float64,
     sd: float,
 ) -> tuple[bool, ...]:
     """Whether the margins of each window stand off zero by more than the known lines explain."""
     rest = corrected.astype(np.float64)
-    for area, (centres, shares) in zip(areas, lines, strict=True):
-        rest -= area * lorentzian_lines(axis, centres, shares, width_ppm)
+    for area, (centres, shares), own in zip(areas, lines, own_widths_ppm, strict=True):
+        rest -= area * lorentzian_lines(axis, centres, shares, own)
     # A product is not there yet in the first spectra: what it will become is judged by the
     # largest of the other signals; the reference may be of any strength.
     followed = list(zip(areas, plan.all, strict=True))[0 if plan.reference is None else 1 :]

@@ -20,8 +20,8 @@ import numpy as np
 from scipy.stats import t as student
 
 from kinetics.errors import FitError
+from kinetics.rates.diagnostics import noise_remarks
 from kinetics.rates.estimate import Problem, estimate
-from kinetics.rates.fitting import noise_remarks
 from kinetics.rates.laws import law_named
 from kinetics.rates.model import make_model
 from kinetics.rates.profile import profile
@@ -79,7 +79,7 @@ def last_time(law: str, conversion: float) -> float:
 
 
 def truth(law: str, spectra: int, conversion: float) -> tuple[Series, Float64]:
-    """Return the noiseless series of a cell and the model's true vector."""
+    """Return the noiseless series of a cell and the true parameters."""
     times = np.linspace(0.0, last_time(law, conversion), spectra + 1)[1:]
     q = question_for(law)
     species = tuple(q.consumed) + tuple(q.formed)
@@ -88,7 +88,7 @@ def truth(law: str, spectra: int, conversion: float) -> tuple[Series, Float64]:
     natural = [*rates_for(law).values(), *(STARTS[s] for s in model.free_start)]
     x = model.to_vector(np.maximum(np.array(natural), 0.0))
     values = np.real(model.predict(x, times, np.zeros(spectra)))
-    return make_series(times, values, model.observed), x
+    return make_series(times, values, model.observed), np.array(natural)
 
 
 def covariances(noise: str, clean: Float64) -> tuple[Float64, Float64]:
@@ -128,7 +128,7 @@ def wander(count: int, columns: int, rng: np.random.Generator) -> Float64:
     return out
 
 
-def bound(noise: str, clean: Series, x: Float64, law: str) -> float:
+def bound(noise: str, clean: Series, natural: Float64, law: str) -> float:
     """Return t times the Cramér–Rao standard error of ln k."""
     spectra, count = clean.values.shape
     stated, _ = covariances(noise, clean.values)
@@ -142,6 +142,7 @@ def bound(noise: str, clean: Series, x: Float64, law: str) -> float:
         whole = SD**2 * np.einsum("nm,ab->namb", lag, np.eye(count))
     full = whole.reshape(spectra * count, spectra * count)
     model = make_model(law_named(law), clean, question_for(law))
+    x = model.to_vector(natural)
     j = model.jacobian(x, clean.time_s, np.zeros(spectra)).reshape(-1, model.size)
     information = j.T @ np.linalg.solve(full, j)
     se = float(np.sqrt(np.linalg.inv(information)[0, 0]))
@@ -150,7 +151,7 @@ def bound(noise: str, clean: Series, x: Float64, law: str) -> float:
 
 def cell(law: str, noise: str, spectra: int, conversion: float, runs: int, seed: int = 1) -> Cell:
     """Simulate one cell."""
-    clean, x_true = truth(law, spectra, conversion)
+    clean, natural = truth(law, spectra, conversion)
     q = question_for(law)
     rng = np.random.default_rng([seed, LAWS.index(law), NOISES.index(noise), spectra])
     closed = covered = warned = 0
@@ -170,7 +171,7 @@ def cell(law: str, noise: str, spectra: int, conversion: float, runs: int, seed:
             closed += 1
             covered += p.low <= k <= p.high
             widths.append(0.5 * np.log(p.high / p.low))
-    width = float(np.median(widths)) / bound(noise, clean, x_true, law) if widths else np.nan
+    width = float(np.median(widths)) / bound(noise, clean, natural, law) if widths else np.nan
     return Cell(law, noise, spectra, conversion, runs, closed, covered, warned, width)
 
 

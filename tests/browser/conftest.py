@@ -1,7 +1,5 @@
 """A real Chromium, and the real dashboard as a process of its own."""
 
-import os
-import shutil
 import signal
 import subprocess
 import sys
@@ -12,20 +10,9 @@ from pathlib import Path
 from urllib.request import urlopen
 
 import pytest
-from playwright.sync_api import Browser, Page, sync_playwright
+from playwright.sync_api import Browser, Page
 
 ROOT = Path(__file__).resolve().parents[2]
-# Without these Chromium calls out for updates and fails on closed networks.
-FLAGS = [
-    "--headless",
-    "--no-sandbox",
-    "--disable-gpu",
-    "--disable-quic",
-    "--no-first-run",
-    "--disable-background-networking",
-    "--disable-component-update",
-    "--disable-sync",
-]
 
 
 @dataclass(frozen=True)
@@ -34,16 +21,6 @@ class Dashboard:
 
     address: str
     process: subprocess.Popen[str]
-
-
-@pytest.fixture(scope="session")
-def browser() -> Iterator[Browser]:
-    executable = os.environ.get("KETTLEWATCH_CHROMIUM") or shutil.which("chromium")
-    assert executable, "these tests need Chromium: apt-get install chromium"
-    with sync_playwright() as playwright:
-        running = playwright.chromium.launch(executable_path=executable, args=FLAGS)
-        yield running
-        running.close()
 
 
 @pytest.fixture
