@@ -16,6 +16,7 @@ from kinetics.signals.calibration import Calibration
 from kinetics.signals.model import Integrals
 from kinetics.signals.response import Response
 from kinetics.spectra.align import Template
+from kinetics.spectra.matched import GroupShapes
 from kinetics.spectra.model import ProcessingRecord, Stamp
 from kinetics.spectra.processing import Shared
 
@@ -79,6 +80,10 @@ def calibration_to_bytes(calibration: Calibration) -> bytes:
         "local": np.array(response.local_baseline, bool),
         "line_width_ppm": response.line_width_ppm,
     }
+    arrays["groups_first"] = np.array(shared.groups.first_ppm, np.float64)
+    arrays["groups_step"] = shared.groups.step_ppm
+    for index, group in enumerate(shared.groups.shapes):
+        arrays[f"group_{index}"] = group
     for index, shape in enumerate(calibration.shapes):
         arrays[f"shape_{index}"] = shape
     return pack(arrays)
@@ -96,6 +101,11 @@ def calibration_from_bytes(data: bytes) -> Calibration:
             Template(float(a["template_first"]), a["template"]),
             tuple((float(low), float(high)) for low, high in a["occupied"]),
             float(a["shift_ppm"]),
+            GroupShapes(
+                tuple(float(v) for v in a["groups_first"]),
+                float(a["groups_step"]),
+                tuple(a[f"group_{i}"] for i in range(a["groups_first"].size)),
+            ),
         ),
         first_shift_ppm=float(a["first_shift_ppm"]),
         line_width_hz=float(a["line_width_hz"]),

@@ -15,7 +15,8 @@ from kinetics.signals.pattern import sticks
 from kinetics.signals.response import Response, make_response
 from kinetics.spectra.align import Template, displacement, line_near, make_template
 from kinetics.spectra.baseline import merged
-from kinetics.spectra.fourier import transform
+from kinetics.spectra.coloured import noise_correlation
+from kinetics.spectra.fourier import rotated, transform
 from kinetics.spectra.lines import (
     LinePosition,
     find_lines,
@@ -23,8 +24,9 @@ from kinetics.spectra.lines import (
     occupied_ranges,
     width_at_half,
 )
+from kinetics.spectra.matched import NO_GROUPS, GroupShapes, group_shapes
 from kinetics.spectra.model import Axis, Float32, Float64, Raw
-from kinetics.spectra.phase import fit_phase, line_phases
+from kinetics.spectra.phase import LinePhases, common_slope, line_phases
 from kinetics.spectra.processing import (
     Phased,
     Settings,
@@ -102,11 +104,12 @@ def calibrate(raws: Sequence[Raw], plan: FollowPlan, version: int = 1) -> Calibr
     first = parts[0]
     axis, shift = _first_axis(first, settings)
     template = make_template(first.values, axis, _template_range(plan, axis), settings.exclude)
-    mean = _mean_spectrum(parts, axis, template, settings, shift)
+    axes = _aligned(parts, axis, template, settings, shift)
+    mean = _mean_spectrum(parts, axes)
     frequency = raws[0].frequency_mhz or float("nan")
     corrected, occupied, sd = _settled_baseline(mean, axis, settings)
     width_ppm = _line_width(corrected, axis, shift, plan, sd)
-    shared = Shared(p1, template, occupied, shift)
+    shared = Shared(p1, template, occupied, shift, _groups(parts, axes, occupied, settings))
     shapes = tuple(_shape(corrected, axis, signal, sd) for signal in plan.all)
     lines = [_lines_of(corrected, axis, signal, sd, frequency) for signal in plan.all]
     response = make_response(
@@ -117,7 +120,7 @@ def calibrate(raws: Sequence[Raw], plan: FollowPlan, version: int = 1) -> Calibr
         width_ppm,
         [_own_width(corrected, axis, signal, sd, width_ppm) for signal in plan.all],
         None if settings.baseline == "none" else baseline_operator_for(axis, settings, occupied),
-        first.noise_correlation,
+        _noise_colour(parts),
         sd,
     )
     return Calibration(
@@ -132,27 +135,28 @@ def calibrate(raws: Sequence[Raw], plan: FollowPlan, version: int = 1) -> Calibr
     )
 
 
+def _noise_colour(parts: Sequence[Phased]) -> Float64:
+    known = parts[0].noise_correlation
+    if known is not None:
+        return known
+    size = parts[0].values.size
+    return noise_correlation([part.values for part in parts if part.values.size == size])
+
+
 def _first_order_phase(raws: Sequence[Raw], settings: Settings) -> float:
-    """Weighted median of the first-order phase over the spectra; nan where none is needed."""
+    """First-order phase that all spectra share; nan where none is needed."""
     if settings.phase != "automatic":
         return float("nan")
-    slopes: list[tuple[float, float]] = []
+    seen: list[LinePhases] = []
     for raw in raws:
         if raw.domain != "time" or raw.frequency_mhz is None:
             continue
         spectrum = transform(
             raw, broadening_hz=settings.broadening_hz, zero_fill=settings.zero_fill
         )
-        lines = line_phases(raw, spectrum, settings.exclude)
-        phase = fit_phase(lines)
-        if phase is not None:
-            slopes.append((phase.p1_deg, float((1.0 / lines.sigma_deg).sum())))
-    if not slopes:
-        return float("nan")
-    values, weights = np.array(slopes).T
-    order = np.argsort(values)
-    half_way = np.searchsorted(np.cumsum(weights[order]), 0.5 * weights.sum())
-    return float(values[order][half_way])
+        seen.append(line_phases(raw, spectrum, settings.exclude))
+    slope = common_slope(seen)
+    return float("nan") if slope is None else slope
 
 
 def _first_axis(part: Phased, settings: Settings) -> tuple[Axis, float]:
@@ -182,18 +186,40 @@ def _template_range(plan: FollowPlan, axis: Axis) -> Window:
     return (low, high) if high > low + 0.05 else (last, axis.first_ppm)
 
 
-def _mean_spectrum(
+def _aligned(
     parts: Sequence[Phased], axis: Axis, template: Template, settings: Settings, shift: float
-) -> Float32:
-    """Mean of the spectra, each laid over the first, on the axis of the first, shape (n,)."""
-    total = parts[0].values.astype(np.float64)
-    ppm = axis.ppm()[::-1]
+) -> list[Axis]:
+    """Referenced axes of the spectra, each laid over the first."""
+    axes = [axis]
     for part in parts[1:]:
         moved = part.axis.shifted(-displacement(part.values, part.axis, template, settings.exclude))
         if not np.isnan(shift):
             moved = moved.shifted(shift - line_near(part.values, moved, shift)[0])
-        total += np.interp(ppm, moved.ppm()[::-1], part.values[::-1])[::-1]
+        axes.append(moved)
+    return axes
+
+
+def _mean_spectrum(parts: Sequence[Phased], axes: Sequence[Axis]) -> Float32:
+    """Mean of the spectra on the axis of the first, shape (n,)."""
+    total = parts[0].values.astype(np.float64)
+    ppm = axes[0].ppm()[::-1]
+    for part, axis in zip(parts[1:], axes[1:], strict=True):
+        total += np.interp(ppm, axis.ppm()[::-1], part.values[::-1])[::-1]
     return np.asarray(total / len(parts), np.float32)
+
+
+def _groups(
+    parts: Sequence[Phased], axes: Sequence[Axis], occupied: tuple[Window, ...], settings: Settings
+) -> GroupShapes:
+    """Complex shapes of the lines, for the phase of later spectra."""
+    spectra = [
+        (rotated(part.source[0].values, part.phase.p0_deg, part.phase.p1_deg), axis)
+        for part, axis in zip(parts, axes, strict=True)
+        if part.source is not None
+    ]
+    if not spectra:
+        return NO_GROUPS
+    return group_shapes(spectra, occupied, settings.exclude, noise_sd(parts[0].values))
 
 
 def _settled_baseline(
@@ -258,11 +284,14 @@ def _top(corrected: Float32, axis: Axis, signal: Signal) -> tuple[float, float]:
 
 
 def _shape(corrected: Float32, axis: Axis, signal: Signal, sd: float) -> Float32:
+    """Shape of a signal, its first point exactly on the upper edge of the window."""
     start, stop = axis.span(signal.window)
-    part = corrected[max(int(start), 0) : max(int(np.ceil(stop)), 0)]
-    if part.size < 8 or part.max() < SHAPE_SNR * sd:
+    place = start + np.arange(int(stop - start) + 1)
+    place = place[(place >= 0) & (place <= axis.size - 1)]
+    part = np.interp(place, np.arange(axis.size), corrected)
+    if place.size < 8 or place[0] != start or part.max() < SHAPE_SNR * sd:
         return np.zeros(0, np.float32)
-    return np.array(part)
+    return part.astype(np.float32)
 
 
 def _lines_of(

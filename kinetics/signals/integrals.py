@@ -79,7 +79,7 @@ def own_drift(spectrum: Spectrum, signal: Signal, shape: Float32, shape_step_ppm
             np.interp(np.linspace(0, shape.size - 1, length), np.arange(shape.size), shape),
             np.float32,
         )
-    start, _ = axis.span(signal.window)
+    start, _ = axis.span(signal.window)  # where the first point of `shape` belongs
     first, reach_points = int(start), round(reach / abs(axis.step_ppm))
     low, high = first - reach_points, first + shape.size + reach_points
     if low < 0 or high > axis.size or reach_points < 1:
@@ -97,7 +97,7 @@ def own_drift(spectrum: Spectrum, signal: Signal, shape: Float32, shape_step_ppm
     left, mid, right = (float(v) for v in score[best - 1 : best + 2])
     bend = left - 2 * mid + right
     fraction = 0.5 * (left - right) / bend if bend < 0 else 0.0
-    return (best + fraction - reach_points) * axis.step_ppm
+    return (first + best + fraction - reach_points - float(start)) * axis.step_ppm
 
 
 def _likeness(a: Float64, b: Float64) -> float:

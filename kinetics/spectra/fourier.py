@@ -128,3 +128,9 @@ def rotate(values: Complex64, p0_deg: float, p1_deg: float) -> Float32:
         return np.asarray(values.real * turn.real - values.imag * turn.imag, np.float32)
     angle = np.deg2rad(np.float32(p0_deg) + np.float32(p1_deg) * pivot_scale(values.size))
     return np.asarray(values.real * np.cos(angle) - values.imag * np.sin(angle), np.float32)
+
+
+def rotated(values: Complex64, p0_deg: float, p1_deg: float) -> Complex64:
+    """Return complex `values` after phase correction; its real part is what `rotate` returns."""
+    angle = np.deg2rad(np.float32(p0_deg) + np.float32(p1_deg) * pivot_scale(values.size))
+    return np.asarray(values * np.exp(1j * angle), np.complex64)

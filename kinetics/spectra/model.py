@@ -186,9 +186,6 @@ class Spectrum:
         Shift axis after referencing.
     noise_sd
         Standard deviation of the noise of one point, in the unit of `intensities`.
-    noise_correlation
-        Autocorrelation of the noise at lags 0, 1, … points, float64, shape (lags,): 1, 0, 0, …
-        for white noise; apodisation and zero filling make neighbours alike.
     line_width_hz
         Full width at half height of the reference line in Hz (nan without frequency or line).
     frequency_mhz
@@ -203,7 +200,6 @@ class Spectrum:
     baseline: Float32
     axis: Axis
     noise_sd: float
-    noise_correlation: Float64
     line_width_hz: float
     frequency_mhz: float
     record: ProcessingRecord

@@ -10,6 +10,7 @@ first order. Along a run the first order is known from the calibration and only 
 is found each time.
 """
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -258,3 +259,43 @@ def _refined(lines: LinePhases, p0: float, p1: float, find_slope: bool) -> Phase
     heavier = np.searchsorted(np.cumsum(say[order]), 0.5 * say.sum())
     disagreement = float(np.abs(rest)[order][heavier])
     return Phase((p0 + 180.0) % 360.0 - 180.0, p1, disagreement, int(lines.where.size))
+
+
+def common_slope(seen: Sequence[LinePhases]) -> float | None:
+    """Return the first-order phase (degrees) that spectra of one run share; None without lines.
+
+    The zero order of each spectrum is free. Starts from the median of what single spectra say;
+    then iteratively re-weighted least squares through all lines of all spectra at once.
+
+    Parameters
+    ----------
+    seen
+        From `line_phases`, one a spectrum.
+    """
+    single = [(lines, phase) for lines in seen if (phase := fit_phase(lines)) is not None]
+    if not single:
+        return None
+    says = np.array([(1.0 / lines.sigma_deg).sum() for lines, _ in single])
+    slopes = np.array([phase.p1_deg for _, phase in single])
+    order = np.argsort(slopes)
+    p1 = float(slopes[order][np.searchsorted(np.cumsum(says[order]), 0.5 * says.sum())])
+    zeros = [
+        fitted.p0_deg if (fitted := fit_phase(lines, p1)) is not None else 0.0
+        for lines, _ in single
+    ]
+    for _ in range(15):
+        moment, information = -p1 * _P1_USUAL_DEG**-2, _P1_USUAL_DEG**-2
+        for position, (lines, _phase) in enumerate(single):
+            rest = lines.correction_deg - zeros[position] - p1 * lines.where
+            rest = (rest + 180.0) % 360.0 - 180.0
+            scale = np.hypot(lines.sigma_deg, _ROBUST_DEG)
+            weight = lines.sigma_deg**-2 / (1 + (rest / scale) ** 2) ** 2
+            centre = float((weight * lines.where).sum() / weight.sum())
+            mean = float((weight * rest).sum() / weight.sum())
+            x = lines.where - centre
+            moment += float((weight * x * rest).sum())
+            information += float((weight * x**2).sum())
+            zeros[position] += mean
+        step = moment / information
+        p1 = float(np.clip(p1 + step, -1.2 * _P1_LIMIT_DEG, 1.2 * _P1_LIMIT_DEG))
+    return p1

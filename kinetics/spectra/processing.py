@@ -1,6 +1,6 @@
 """From one `Raw` to one `Spectrum`, with what the run's calibration holds in common."""
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import lru_cache
 from typing import Literal
 
@@ -10,10 +10,11 @@ from kinetics.errors import UnreadableError
 from kinetics.remarks import Remark
 from kinetics.spectra.align import Template, displacement, line_near
 from kinetics.spectra.baseline import BaselineOperator, Ranges, baseline_operator, merged
-from kinetics.spectra.fourier import NOISE_LAGS, ComplexSpectrum, rotate, transform
+from kinetics.spectra.fourier import ComplexSpectrum, rotate, rotated, transform
 from kinetics.spectra.lines import LinePosition, noise_sd, width_at_half
+from kinetics.spectra.matched import NO_GROUPS, GroupShapes, matched_phases
 from kinetics.spectra.model import Axis, Float32, Float64, ProcessingRecord, Raw, Spectrum
-from kinetics.spectra.phase import Phase, fit_phase, line_phases
+from kinetics.spectra.phase import LinePhases, Phase, fit_phase, line_phases
 
 Window = tuple[float, float]
 
@@ -64,23 +65,38 @@ class Shared:
         ppm ranges in which lines stand, after referencing.
     shift_ppm
         Where the shift reference stands after referencing; nan without one.
+    groups
+        Shapes of groups of lines against which phases are found; empty where they are not.
     """
 
     p1_deg: float
     template: Template
     occupied: tuple[Window, ...]
     shift_ppm: float
+    groups: GroupShapes = NO_GROUPS
 
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Phased:
-    """A real spectrum before alignment and baseline; `noise_correlation` as in `Spectrum`."""
+    """A real spectrum before alignment and baseline.
+
+    `noise_correlation` as in `ComplexSpectrum`; None for a spectrum that arrived processed, whose
+    noise a run's spectra tell together (`coloured`).
+    """
 
     values: Float32
     axis: Axis
-    noise_correlation: Float64
+    noise_correlation: Float64 | None
     phase: Phase
     remarks: tuple[Remark, ...]
+    source: tuple[ComplexSpectrum, LinePhases] | None = None
+
+    def turned(self, phase: Phase) -> "Phased":
+        """Return the same spectrum with another phase correction."""
+        if self.source is None:
+            raise ValueError("a spectrum that arrived processed cannot be phased again")
+        values = rotate(self.source[0].values, phase.p0_deg, phase.p1_deg)
+        return replace(self, values=values, phase=phase)
 
 
 def phased(raw: Raw, settings: Settings, p1_deg: float | None) -> Phased:
@@ -97,66 +113,54 @@ def phased(raw: Raw, settings: Settings, p1_deg: float | None) -> Phased:
         values = np.asarray(raw.data.real, np.float32) / np.float32(raw.scans)
         values = np.asarray(np.nan_to_num(values), np.float32)
         recorded = Phase(0.0, 0.0, 0.0, 0)
-        return Phased(values, raw.axis, measured_correlation(values), recorded, ())
+        return Phased(values, raw.axis, None, recorded, ())
     if raw.frequency_mhz is None or not raw.spectral_width_hz > 0:
         raise UnreadableError("the file does not say the spectrometer frequency or spectral width")
     spectrum = transform(raw, broadening_hz=settings.broadening_hz, zero_fill=settings.zero_fill)
-    phase, remarks = _phase(raw, spectrum, settings, p1_deg)
+    phase, lines, remarks = _phase(raw, spectrum, settings, p1_deg)
     values = rotate(spectrum.values, phase.p0_deg, phase.p1_deg)
-    return Phased(values, spectrum.axis, spectrum.noise_correlation, phase, remarks)
+    source = None if lines is None else (spectrum, lines)
+    return Phased(values, spectrum.axis, spectrum.noise_correlation, phase, remarks, source)
 
 
 def _phase(
     raw: Raw, spectrum: ComplexSpectrum, settings: Settings, p1_deg: float | None
-) -> tuple[Phase, tuple[Remark, ...]]:
+) -> tuple[Phase, LinePhases | None, tuple[Remark, ...]]:
     if isinstance(settings.phase, tuple):
-        return Phase(settings.phase[0], settings.phase[1], 0.0, 0), ()
+        return Phase(settings.phase[0], settings.phase[1], 0.0, 0), None, ()
     if settings.phase == "recorded":
         if raw.recorded_phase is None:
-            return Phase(0.0, 0.0, 0.0, 0), (
-                Remark(
-                    "phase-not-recorded",
-                    "The sheet asks for the recorded phase, but the file holds none.",
-                    "The spectrum was left unphased.",
-                    'Use phase = "automatic".',
-                    doubtful=True,
+            return (
+                Phase(0.0, 0.0, 0.0, 0),
+                None,
+                (
+                    Remark(
+                        "phase-not-recorded",
+                        "The sheet asks for the recorded phase, but the file holds none.",
+                        "The spectrum was left unphased.",
+                        'Use phase = "automatic".',
+                        doubtful=True,
+                    ),
                 ),
             )
-        return Phase(*raw.recorded_phase, 0.0, 0), ()
+        return Phase(*raw.recorded_phase, 0.0, 0), None, ()
     lines = line_phases(raw, spectrum, settings.exclude)
     found = fit_phase(lines, p1_deg)
     if found is None:
-        return Phase(0.0, 0.0, 180.0, 0), (
-            Remark(
-                "no-line",
-                "No line stands out of the noise, so no phase could be found.",
-                "The integrals of this spectrum mean little.",
-                "Check shim, lock, sample and receiver.",
-                doubtful=True,
+        return (
+            Phase(0.0, 0.0, 180.0, 0),
+            None,
+            (
+                Remark(
+                    "no-line",
+                    "No line stands out of the noise, so no phase could be found.",
+                    "The integrals of this spectrum mean little.",
+                    "Check shim, lock, sample and receiver.",
+                    doubtful=True,
+                ),
             ),
         )
-    return found, ()
-
-
-def measured_correlation(values: Float32) -> Float64:
-    """Estimate the noise autocorrelation of a spectrum that arrived processed, shape (lags,).
-
-    Taken from the quietest eighth of the spectrum; sixteen lags, beyond which it is but noise.
-    """
-    blocks = values[: values.size // 32 * 32].reshape(32, -1).astype(np.float64)
-    correlation = np.zeros(NOISE_LAGS)
-    correlation[0] = 1.0
-    if blocks.shape[1] < 64:
-        return correlation
-    place = np.linspace(-1, 1, blocks.shape[1])
-    trend = np.polynomial.polynomial.polyvander(place, 3)
-    rest = blocks.T - trend @ np.linalg.lstsq(trend, blocks.T, rcond=None)[0]
-    quiet = rest[:, np.argsort(rest.std(axis=0))[:4]]
-    variance = float(np.mean(quiet**2))
-    if variance > 0:
-        for lag in range(1, 16):
-            correlation[lag] = float(np.mean(quiet[lag:] * quiet[:-lag])) / variance
-    return correlation
+    return found, lines, ()
 
 
 def process(raw: Raw, settings: Settings, shared: Shared) -> Spectrum:
@@ -171,7 +175,11 @@ def process(raw: Raw, settings: Settings, shared: Shared) -> Spectrum:
     """
     first_order = None if np.isnan(shared.p1_deg) else shared.p1_deg
     part = phased(raw, settings, first_order)
-    axis, remarks, line = _referenced(part, settings, shared)
+    moved = displacement(part.values, part.axis, shared.template, settings.exclude)
+    axis, line = _referenced(part, moved, shared)
+    if part.source is not None and shared.groups.shapes:
+        part = _phased_by_groups(part, axis, shared)
+        axis, line = _referenced(part, moved, shared)
     corrected, baseline, _ = corrected_baseline(part.values, axis, settings, shared.occupied)
     free = baseline_operator_for(axis, settings, shared.occupied).free
     sd = noise_sd(corrected, free)
@@ -186,7 +194,6 @@ def process(raw: Raw, settings: Settings, shared: Shared) -> Spectrum:
         baseline=baseline,
         axis=axis,
         noise_sd=sd,
-        noise_correlation=part.noise_correlation,
         line_width_hz=width,
         frequency_mhz=frequency,
         record=ProcessingRecord(
@@ -198,21 +205,33 @@ def process(raw: Raw, settings: Settings, shared: Shared) -> Spectrum:
             baseline=settings.baseline,
             shift_ppm=axis.first_ppm - part.axis.first_ppm,
         ),
-        remarks=(*raw.remarks, *part.remarks, *remarks),
+        remarks=(*raw.remarks, *part.remarks),
     )
 
 
-def _referenced(
-    part: Phased, settings: Settings, shared: Shared
-) -> tuple[Axis, tuple[Remark, ...], float | None]:
+def _phased_by_groups(part: Phased, axis: Axis, shared: Shared) -> Phased:
+    """Find the zero order again, with the shapes of the run's own lines."""
+    if part.source is None:
+        return part
+    spectrum, lines = part.source
+    p0, p1 = part.phase.p0_deg, part.phase.p1_deg
+    groups = matched_phases(rotated(spectrum.values, p0, p1), axis, shared.groups, p0, p1)
+    together = LinePhases(
+        np.concatenate((lines.where, groups.where)),
+        np.concatenate((lines.correction_deg, groups.correction_deg)),
+        np.concatenate((lines.sigma_deg, groups.sigma_deg)),
+    )
+    found = fit_phase(together, p1)
+    return part if found is None else part.turned(found)
+
+
+def _referenced(part: Phased, moved: float, shared: Shared) -> tuple[Axis, float | None]:
     """Lay the spectrum over the template, then put the shift reference where it belongs."""
-    moved = displacement(part.values, part.axis, shared.template, settings.exclude)
     axis = part.axis.shifted(-moved)
     if np.isnan(shared.shift_ppm):
-        return axis, (), None
+        return axis, None
     found, _ = line_near(part.values, axis, shared.shift_ppm)
-    off = found - shared.shift_ppm
-    return axis.shifted(-off), (), shared.shift_ppm
+    return axis.shifted(shared.shift_ppm - found), shared.shift_ppm
 
 
 def baseline_operator_for(axis: Axis, settings: Settings, occupied: Ranges) -> BaselineOperator:
