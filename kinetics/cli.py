@@ -52,11 +52,15 @@ def _parser() -> argparse.ArgumentParser:
         "--snr",
         type=float,
         default=100.0,
-        help="expected S/N of one proton of the limiting species at the start (default 100)",
+        help="amount over its noise in one spectrum, limiting species at the start (default 100)",
     )
     plan.add_argument("--spectra", type=int, default=40, help="how many (default 40)")
     plan.add_argument(
         "--acquisition", type=float, default=0.0, metavar="S", help="length of one, s"
+    )
+    plan.add_argument("--length", type=float, metavar="S", help="of the run, s (default: best)")
+    plan.add_argument(
+        "--precision", type=float, default=2.0, metavar="PERCENT", help="wanted of k (default 2)"
     )
     plan.add_argument("--json", action="store_true")
     plan.set_defaults(run=_plan)
@@ -126,6 +130,8 @@ def _plan(options: argparse.Namespace) -> int:
         snr=options.snr,
         spectra=options.spectra,
         acquisition_s=options.acquisition,
+        length_s=options.length,
+        precision=options.precision / 100,
     )
     print(json.dumps(outlook, indent=2) if options.json else "\n".join(plan_words(outlook)))
     return 0

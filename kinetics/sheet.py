@@ -38,9 +38,14 @@ LawName = Literal[
 ]
 LAWS: tuple[str, ...] = get_args(LawName)
 
-# Keys of the contract whose effect is not built yet: (path, why). Emptied as they are built.
+# Keys of the contract whose effect is not built yet, by path, and what it will be. A path through
+# [[signals]] means any of them; "path=value" only that value. Emptied as they are built.
 NOT_BUILT: dict[str, str] = {
     "notify": "telling someone about events",
+    "temperature": "a temperature log (use temperature_c until then)",
+    "reference.t1_s": "the correction for saturation",
+    "signals.t1_s": "the correction for saturation",
+    "signals.method=multiplet": "the joint fit of overlapping signals",
 }
 
 
@@ -325,10 +330,12 @@ def parse_sheet(text: str, origin: str) -> Sheet:
         data = tomllib.loads(text)
     except tomllib.TOMLDecodeError as error:
         raise SheetError(f"{origin}: is not valid TOML: {error}") from None
-    for key, effect in NOT_BUILT.items():
-        if _holds(data, key.split(".")):
+    for path, effect in NOT_BUILT.items():
+        key, _, value = path.partition("=")
+        if _holds(data, key.split("."), value):
+            named = f'{key} = "{value}"' if value else key
             raise SheetError(
-                f"{origin}: {key}: {effect} is not built yet in this version; "
+                f"{origin}: {named}: {effect} is not built yet in this version; "
                 "take the key out to go on without it"
             )
     try:
@@ -339,12 +346,13 @@ def parse_sheet(text: str, origin: str) -> Sheet:
         raise SheetError("\n".join(dict.fromkeys(lines))) from None
 
 
-def _holds(data: Any, keys: list[str]) -> bool:
-    for key in keys:
-        if not isinstance(data, dict) or key not in data:
-            return False
-        data = data[key]
-    return True
+def _holds(data: Any, keys: list[str], value: str = "") -> bool:
+    """Whether a key stands there (with that value, where one is asked for)."""
+    if not keys:
+        return not value or data == value
+    if isinstance(data, list):
+        return any(_holds(part, keys, value) for part in data)
+    return isinstance(data, dict) and keys[0] in data and _holds(data[keys[0]], keys[1:], value)
 
 
 def _line(origin: str, item: dict[str, Any], data: dict[str, Any]) -> str:
@@ -419,7 +427,7 @@ def _known_keys(parents: list[int | str]) -> list[str]:
             continue
         model = _model_in(model.model_fields[parent].annotation)
     known = [str(name) for name in model.model_fields]
-    return known + [key for key in NOT_BUILT if "." not in key] if model is Sheet else known
+    return [*known, "notify"] if model is Sheet else known
 
 
 def _model_in(annotation: Any) -> Any:

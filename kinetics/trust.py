@@ -66,15 +66,16 @@ def trust(run: Run, study: Study | None) -> Trust:
             )
             off = abs(study.balance.mean - 1) > _BALANCE_OFF
             (concerns if off else supports).append(words)
-        if study.best.estimate.whitener.rho == 0:
+        if not study.best.diagnostics.correlated:
             supports.append("The points scatter about the curve without pattern.")
-    if run.measured.size:
-        spread = np.nanmedian(run.amounts.standard_uncertainty / np.abs(run.amounts.values).max())
+    if run.fitted.size:
+        values = run.amounts.values[run.fitted]
+        spread = np.median(run.amounts.standard_uncertainty[run.fitted] / np.abs(values).max())
         supports.append(
             f"A typical point is good to {100 * float(spread):.2g} % of the largest amount."
         )
     heavy = counts["doubtful"] > 0.2 * max(total, 1) or (
-        study is not None and study.best.estimate.whitener.rho > 0
+        study is not None and study.best.diagnostics.correlated
     )
     headline = (
         "Look before you rely on it"

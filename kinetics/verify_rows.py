@@ -211,7 +211,11 @@ def _off(
     tolerance: float = TOLERANCE,
 ) -> list[str]:
     """One line if an array is off by more than the tolerance anywhere; nan equals nan."""
-    a, b = np.asarray(recorded, np.float64), np.asarray(now, np.float64)
+    a, b = np.asarray(recorded), np.asarray(now)
+    if a.dtype.kind == "c" or b.dtype.kind == "c":  # compared part by part
+        a, b = (np.asarray(v, np.complex128).ravel().view(np.float64) for v in (a, b))
+        return _off(name, a, b, float(np.max(scale)), tolerance)
+    a, b = a.astype(np.float64), b.astype(np.float64)
     size = np.broadcast_to(np.asarray(scale, np.float64), b.shape)
     close = (np.abs(a - b) <= tolerance * size) | (a == b) | (np.isnan(a) & np.isnan(b))
     if np.all(close):

@@ -64,6 +64,8 @@ def open_readable(folder: Path) -> sqlite3.Connection:
             connection.execute("SELECT count(*) FROM sqlite_master").fetchone()
         except sqlite3.OperationalError as error:
             raise LogbookError(f"{folder}: the logbook cannot be read ({error})") from None
+    except sqlite3.DatabaseError as error:
+        raise LogbookError(f"{folder}: the logbook is damaged ({error})") from None
     if schema.schema_of(connection) == 0:
         raise LogbookError(f"{folder}: the logbook is empty")
     schema.check_schema(connection)

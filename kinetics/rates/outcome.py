@@ -11,6 +11,8 @@ from kinetics.rates.series import Float64, Series
 
 # How far ahead a forecast looks, in spans of the data.
 _HORIZON_SPANS = 300.0
+# The worst balance is sought among spectra whose variance is at most so many times the usual.
+_AS_CERTAIN = 4.0
 
 
 @dataclass(frozen=True, slots=True)
@@ -165,23 +167,33 @@ def balance(series: Series, question: Question) -> Balance | None:
     """Return the balance of matter; None where nothing is formed or it cannot be drawn up.
 
     Everything is counted as the limiting species. Expected is the charge where it is known, else
-    the mean of the first tenth of the spectra.
+    the mean of the first tenth of the spectra. A spectrum counts as much as its noise allows, and
+    the worst is sought among those about as certain as the usual one: a doubtful spectrum says
+    little about matter.
     """
     name = question.limiting_species
     formed = [p for p in question.formed if p in series.species]
     if name is None or name not in series.species or not formed:
         return None
     a = float(question.consumed.get(name, 1.0))
-    total = series.values[:, series.species.index(name)].copy()
+    share_of = dict.fromkeys(series.species, 0.0)
+    share_of[name] = 1.0
     for product in formed:
-        column = series.values[:, series.species.index(product)]
-        total += column * a / question.formed[product]
+        share_of[product] = a / question.formed[product]
     if question.intermediate in series.species and question.intermediate not in formed:
-        total += series.values[:, series.species.index(str(question.intermediate))]
+        share_of[str(question.intermediate)] = 1.0
+    counted = np.array([share_of[species] for species in series.species])
+    total = series.values @ counted
+    variance = np.einsum("i,nij,j->n", counted, series.covariance, counted)
     charged = question.charged.get(name, 0.0)
     first = max(series.size // 10, min(3, series.size))
     expected = charged if series.unit == "mol/L" and charged > 0 else float(total[:first].mean())
     if not expected > 0:
         return None
     share = total / expected
-    return Balance(float(share.mean()), float(share[np.argmax(np.abs(share - 1))]))
+    usual = float(np.median(variance))
+    weight = 1.0 / np.maximum(variance, 1e-6 * usual) if usual > 0 else np.ones_like(variance)
+    sound = share[variance <= _AS_CERTAIN * usual]
+    return Balance(
+        float(np.average(share, weights=weight)), float(sound[np.argmax(np.abs(sound - 1))])
+    )

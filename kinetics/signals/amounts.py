@@ -122,7 +122,9 @@ def _combined(values: Float64, covariance: Float64, rule: AmountRule) -> tuple[F
     columns = rule.columns
     if len(columns) == len(rule.species):
         return values, covariance
-    typical = np.nanmedian(np.einsum("nii->ni", covariance), axis=0)
+    variances = np.einsum("nii->ni", covariance)
+    known = np.isfinite(variances).all(axis=1)
+    typical = np.median(variances[known], axis=0) if known.any() else np.ones(len(rule.species))
     onto = np.zeros((len(columns), len(rule.species)))
     for row, name in enumerate(columns):
         members = np.array([s == name for s in rule.species])

@@ -291,7 +291,7 @@ def _shape(corrected: Float32, axis: Axis, signal: Signal, sd: float) -> Float32
     part = np.interp(place, np.arange(axis.size), corrected)
     if place.size < 8 or place[0] != start or part.max() < SHAPE_SNR * sd:
         return np.zeros(0, np.float32)
-    return part.astype(np.float32)
+    return np.asarray(part, np.float32)
 
 
 def _lines_of(
