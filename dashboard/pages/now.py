@@ -127,9 +127,10 @@ def _answers(run: Run, study: Study | None, why_not: str) -> None:
         )
     half = best.half_life()
     if isfinite(half.value):
-        ends = f"{duration(half.low)} to {duration(half.high)}"
-        exact = f"{rounded(half.value, half.low, half.high)} s"
-        answers.append(Card("Half-life", duration(half.value), ends, exact))
+        # To the minute both ends are often the same; the seconds tell.
+        ends = f"{rounded(half.low, half.value)} to {rounded(half.high, half.value)} s"
+        limiting = f"of {study.outcome.limiting}, from the fit's start"
+        answers.append(Card("Half-life", duration(half.value), ends, limiting))
     value, ends = percent(study.outcome.conversion)
     answers.append(
         Card(

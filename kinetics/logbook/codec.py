@@ -13,7 +13,7 @@ import numpy as np
 
 from kinetics.remarks import Remark
 from kinetics.signals.calibration import Calibration
-from kinetics.signals.model import Integrals
+from kinetics.signals.model import Integrals, Signal
 from kinetics.signals.response import Response
 from kinetics.spectra.align import Template
 from kinetics.spectra.matched import GroupShapes
@@ -80,6 +80,7 @@ def calibration_to_bytes(calibration: Calibration) -> bytes:
         "local": np.array(response.local_baseline, bool),
         "line_width_ppm": response.line_width_ppm,
     }
+    arrays["others"] = np.array([o.window for o in calibration.others], np.float64).reshape(-1, 2)
     arrays["groups_first"] = np.array(shared.groups.first_ppm, np.float64)
     arrays["groups_step"] = shared.groups.step_ppm
     for index, group in enumerate(shared.groups.shapes):
@@ -92,7 +93,7 @@ def calibration_to_bytes(calibration: Calibration) -> bytes:
 def calibration_from_bytes(data: bytes) -> Calibration:
     """Read what `calibration_to_bytes` wrote."""
     a = unpack(data)
-    shapes = tuple(a[f"shape_{i}"] for i in range(a["local"].size))
+    shapes = tuple(a[f"shape_{i}"] for i in range(a["local"].size - len(a["others"])))
     return Calibration(
         version=int(a["version"]),
         learned_from=tuple(str(s) for s in a["learned_from"]),
@@ -116,6 +117,9 @@ def calibration_from_bytes(data: bytes) -> Calibration:
             a["noise"],
             tuple(bool(v) for v in a["local"]),
             float(a["line_width_ppm"]),
+        ),
+        others=tuple(
+            Signal("", (float(low), float(high)), 1.0, follow=False) for low, high in a["others"]
         ),
     )
 

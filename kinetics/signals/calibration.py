@@ -11,8 +11,9 @@ import numpy as np
 
 from kinetics.errors import UnreadableError
 from kinetics.signals.model import FollowPlan, Signal
-from kinetics.signals.pattern import sticks
+from kinetics.signals.pattern import SHARE_SD, USUAL_SHARE, fitted_shape, sticks
 from kinetics.signals.response import Response, make_response
+from kinetics.signals.undeclared import undeclared
 from kinetics.spectra.align import Template, displacement, line_near, make_template
 from kinetics.spectra.baseline import merged
 from kinetics.spectra.coloured import noise_correlation
@@ -45,6 +46,8 @@ _SMALLEST_SNR = 5.0
 SHAPE_SNR = 10.0
 # The template for alignment spans the declared windows and this much on either side, in ppm.
 _TEMPLATE_MARGIN = 0.75
+# How far the width of a line (relative) and its Lorentzian share are from the reference's, usually.
+_USUAL_SPREAD = (0.1, 0.1)
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -69,6 +72,8 @@ class Calibration:
         Point distance of `shapes` (negative).
     response
         How sums over windows answer to line areas, and the noise of the sums.
+    others
+        Windows of strong lines nobody declared; they stand behind the plan's in `response`.
     """
 
     version: int
@@ -79,6 +84,7 @@ class Calibration:
     shapes: tuple[Float32, ...]
     shape_step_ppm: float
     response: Response
+    others: tuple[Signal, ...] = ()
 
 
 def calibrate(raws: Sequence[Raw], plan: FollowPlan, version: int = 1) -> Calibration:
@@ -112,13 +118,17 @@ def calibrate(raws: Sequence[Raw], plan: FollowPlan, version: int = 1) -> Calibr
     shared = Shared(p1, template, occupied, shift, _groups(parts, axes, occupied, settings))
     shapes = tuple(_shape(corrected, axis, signal, sd) for signal in plan.all)
     lines = [_lines_of(corrected, axis, signal, sd, frequency) for signal in plan.all]
+    others = undeclared(corrected, axis, plan, sd, width_ppm)
+    lorentz_share, own_widths = _line_shapes(plan, corrected, axis, lines, width_ppm, sd)
     response = make_response(
-        plan,
+        [*plan.all, *(other.signal for other in others)],
+        plan.reference,
         axis,
         corrected,
-        lines,
+        [*lines, *((other.centres_ppm, other.shares) for other in others)],
         width_ppm,
-        [_own_width(corrected, axis, signal, sd, width_ppm) for signal in plan.all],
+        [*own_widths, *(other.width_ppm for other in others)],
+        lorentz_share,
         None if settings.baseline == "none" else baseline_operator_for(axis, settings, occupied),
         _noise_colour(parts),
         sd,
@@ -132,6 +142,7 @@ def calibrate(raws: Sequence[Raw], plan: FollowPlan, version: int = 1) -> Calibr
         shapes=shapes,
         shape_step_ppm=axis.step_ppm,
         response=response,
+        others=tuple(other.signal for other in others),
     )
 
 
@@ -260,23 +271,55 @@ def _line_width(corrected: Float32, axis: Axis, shift: float, plan: FollowPlan, 
     return min(widths, default=4.0 * abs(axis.step_ppm))
 
 
-def _own_width(
+def _line_shapes(
+    plan: FollowPlan,
+    corrected: Float32,
+    axis: Axis,
+    lines: Sequence[tuple[Float64, Float64]],
+    width_ppm: float,
+    sd: float,
+) -> tuple[float, list[float]]:
+    """Lorentzian share of the reference's line-width, and the width of each signal's lines.
+
+    Shim is common to all lines, but natural widths differ by some tenths of a hertz, and so do the
+    tails outside the windows.
+    """
+    first = next((i for i, s in enumerate(plan.all) if not s.exchanging), None)
+    share = USUAL_SHARE
+    if first is not None:
+        chosen = (
+            first
+            if plan.reference is not None
+            else max(
+                (i for i, s in enumerate(plan.all) if not s.exchanging),
+                key=lambda i: _top(corrected, axis, plan.all[i])[1],
+            )
+        )
+        _, share = fitted_shape(
+            corrected, axis, *lines[chosen], (width_ppm, USUAL_SHARE), sd, (0.1, SHARE_SD)
+        )
+    widths = []
+    for signal, one in zip(plan.all, lines, strict=True):
+        if signal.exchanging:
+            widths.append(_exchanging_width(corrected, axis, signal, sd, width_ppm))
+            continue
+        own, _ = fitted_shape(corrected, axis, *one, (width_ppm, share), sd, _USUAL_SPREAD)
+        # A signal that seems much broader consists of lines that run into each other.
+        widths.append(float(np.clip(own, 0.8 * width_ppm, 1.3 * width_ppm)))
+    return share, widths
+
+
+def _exchanging_width(
     corrected: Float32, axis: Axis, signal: Signal, sd: float, reference_ppm: float
 ) -> float:
-    """Width of a signal's highest line where it can be seen, else that of the reference line.
-
-    Shim is common to all lines; a signal that seems broader than the reference consists of lines
-    that run into each other, unless its proton exchanges.
-    """
+    """Width of an exchanging proton's line where it can be seen, else that of the reference."""
     place, height = _top(corrected, axis, signal)
     if height < SHAPE_SNR * sd:
         return reference_ppm
     limit = max(round(0.15 / abs(axis.step_ppm)), 8)
     line = LinePosition(axis.position(place), height)
     width = width_at_half(corrected, line, limit) * abs(axis.step_ppm)
-    if not np.isfinite(width):
-        return reference_ppm
-    return width if signal.exchanging else min(width, reference_ppm)
+    return width if np.isfinite(width) else reference_ppm
 
 
 def _top(corrected: Float32, axis: Axis, signal: Signal) -> tuple[float, float]:

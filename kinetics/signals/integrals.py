@@ -34,7 +34,8 @@ def integrate(spectrum: Spectrum, plan: FollowPlan, calibration: Calibration) ->
         Areas corrected for cut-off tails and for the tails of one another.
     """
     axis, count = spectrum.axis, len(plan.all)
-    offsets, heights, sums = np.zeros(count), np.zeros(count), np.zeros(count)
+    offsets, heights = np.zeros(count), np.zeros(count)
+    sums = np.zeros(count + len(calibration.others))
     noise = max(spectrum.noise_sd, 1e-30)
     for index, signal in enumerate(plan.all):
         shape = calibration.shapes[index]
@@ -46,13 +47,16 @@ def integrate(spectrum: Spectrum, plan: FollowPlan, calibration: Calibration) ->
         heights[index] = float(part.max()) / noise if part.size else 0.0
         local = calibration.response.local_baseline[index]
         sums[index] = window_weights(axis, window, local_baseline=local).of(spectrum.intensities)
+    for index, other in enumerate(calibration.others, start=count):
+        weights = window_weights(axis, other.window, local_baseline=False)
+        sums[index] = weights.of(spectrum.intensities)
     response = calibration.response
     inverse = np.linalg.inv(response.at_width(_width_ppm(spectrum, calibration)))
     # The response was prepared on the calibration's point distance; noise of a sum of points
     # scales with its square root.
     scale = abs(axis.step_ppm / calibration.shape_step_ppm)
     covariance = inverse @ response.noise @ inverse.T * spectrum.noise_sd**2 * scale
-    return Integrals(inverse @ sums, covariance, offsets, heights)
+    return Integrals((inverse @ sums)[:count], covariance[:count, :count], offsets, heights)
 
 
 def _width_ppm(spectrum: Spectrum, calibration: Calibration) -> float:

@@ -3,8 +3,10 @@
 A sum over a window misses the tails outside it, takes in the tails of neighbours, and the
 baseline takes away part of what is left. All three are linear in the line areas: with the
 lines known from the calibration, sums = M · areas. Areas are M⁻¹ · sums, and the noise of the
-sums, baseline included, is carried along. For a Lorentzian and a window n widths wide the
-share inside is (2/π) arctan n (tests compare).
+sums, baseline included, is carried along. Lines are Voigt profiles: shim broadens their core more
+than their far tails, and tails taken for those of a Lorentzian of the same width would cost one
+per cent. For a Lorentzian and a window n widths wide the share inside is (2/π) arctan n (tests
+compare).
 """
 
 from collections.abc import Sequence
@@ -12,8 +14,8 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from kinetics.signals.model import FollowPlan
-from kinetics.signals.pattern import lorentzian_lines
+from kinetics.signals.model import Signal
+from kinetics.signals.pattern import gaussian_share, lorentz_share_at, voigt_lines
 from kinetics.signals.windows import Weights, noise_covariance, window_weights
 from kinetics.spectra.baseline import BaselineOperator
 from kinetics.spectra.model import Axis, Float32, Float64
@@ -24,6 +26,9 @@ WIDTH_FACTORS = np.array([0.5, 0.7, 0.85, 1.0, 1.2, 1.5, 2.0, 3.0, 4.5])
 # the integral, and by more than four standard deviations.
 _LOCAL_SHARE = 0.01
 _LOCAL_SIGNIFICANCE = 4.0
+
+# Centres (ppm), shares, width (ppm) and its Lorentzian share of the lines of one signal.
+_Shape = tuple[Float64, Float64, float, float]
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -62,12 +67,14 @@ _PLACES = np.arange(WIDTH_FACTORS.size, dtype=np.float64)
 
 
 def make_response(
-    plan: FollowPlan,
+    signals: Sequence[Signal],
+    reference: Signal | None,
     axis: Axis,
     corrected: Float32,
     lines: Sequence[tuple[Float64, Float64]],
     width_ppm: float,
     own_widths_ppm: Sequence[float],
+    lorentz_share: float,
     baseline: BaselineOperator | None,
     correlation: Float64,
     sd: float,
@@ -76,8 +83,9 @@ def make_response(
 
     Parameters
     ----------
-    plan
-        What is followed.
+    signals, reference
+        What is summed, and which of them (if any) is the quantitative reference. Signals of no
+        species are lines nobody declared; they get no local baseline.
     axis, corrected
         The mean spectrum of the calibration, baseline removed.
     lines
@@ -85,7 +93,10 @@ def make_response(
     width_ppm
         Width at half height of the reference line.
     own_widths_ppm
-        Width of the lines of each signal, in the order of the plan.
+        Width of the lines of each signal, in the order of `signals`.
+    lorentz_share
+        Lorentzian share of the width of the reference line (see `pattern.voigt_lines`); the
+        Gaussian part, which is the shim's, is the same width in all lines.
     baseline
         The baseline operator, None where no baseline is corrected.
     correlation
@@ -93,18 +104,23 @@ def make_response(
     sd
         Noise of one point of the mean spectrum.
     """
-    whole = [window_weights(axis, s.window, local_baseline=False) for s in plan.all]
-    mixing = _mixing(axis, whole, lines, own_widths_ppm, baseline)
+    whole = [window_weights(axis, s.window, local_baseline=False) for s in signals]
+    gauss_ppm = width_ppm * gaussian_share(lorentz_share)
+    shapes = [
+        (*one, own, lorentz_share_at(own, gauss_ppm))
+        for one, own in zip(lines, own_widths_ppm, strict=True)
+    ]
+    mixing = _mixing(axis, whole, shapes, baseline)
     sums = np.array([w.of(corrected) for w in whole])
     factor_one = int(np.flatnonzero(WIDTH_FACTORS == 1.0)[0])
     areas = np.linalg.solve(mixing[factor_one], sums)
-    local = _needs_local(plan, axis, corrected, lines, areas, own_widths_ppm, correlation, sd)
+    local = _needs_local(signals, reference, axis, corrected, shapes, areas, correlation, sd)
     if any(local):
         whole = [
             window_weights(axis, s.window, local_baseline=flag)
-            for s, flag in zip(plan.all, local, strict=True)
+            for s, flag in zip(signals, local, strict=True)
         ]
-        mixing = _mixing(axis, whole, lines, own_widths_ppm, baseline)
+        mixing = _mixing(axis, whole, shapes, baseline)
     net = np.array([_net(w, axis.size, baseline) for w in whole])
     return Response(mixing, noise_covariance(net, correlation), local, width_ppm)
 
@@ -118,48 +134,55 @@ def _net(weights: Weights, size: int, baseline: BaselineOperator | None) -> Floa
 def _mixing(
     axis: Axis,
     weights: Sequence[Weights],
-    lines: Sequence[tuple[Float64, Float64]],
-    own_widths_ppm: Sequence[float],
+    shapes: Sequence[_Shape],
     baseline: BaselineOperator | None,
 ) -> Float64:
-    out = np.empty((WIDTH_FACTORS.size, len(weights), len(lines)))
+    out = np.empty((WIDTH_FACTORS.size, len(weights), len(shapes)))
     net = np.array([_net(w, axis.size, baseline) for w in weights])
-    for column, ((centres, shares), own) in enumerate(zip(lines, own_widths_ppm, strict=True)):
+    for column, (centres, shares, own, lorentz) in enumerate(shapes):
         for which, factor in enumerate(WIDTH_FACTORS):
-            shape = lorentzian_lines(axis, centres, shares, own * float(factor))
-            out[which, :, column] = net @ shape
+            out[which, :, column] = net @ voigt_lines(
+                axis, centres, shares, own * float(factor), lorentz
+            )
     return out
 
 
 def _needs_local(
-    plan: FollowPlan,
+    signals: Sequence[Signal],
+    reference: Signal | None,
     axis: Axis,
     corrected: Float32,
-    lines: Sequence[tuple[Float64, Float64]],
+    shapes: Sequence[_Shape],
     areas: Float64,
-    own_widths_ppm: Sequence[float],
     correlation: Float64,
     sd: float,
 ) -> tuple[bool, ...]:
     """Whether the margins of each window stand off zero by more than the known lines explain."""
     rest = corrected.astype(np.float64)
-    for area, (centres, shares), own in zip(areas, lines, own_widths_ppm, strict=True):
-        rest -= area * lorentzian_lines(axis, centres, shares, own)
+    for area, (centres, shares, own, lorentz) in zip(areas, shapes, strict=True):
+        rest -= area * voigt_lines(axis, centres, shares, own, lorentz)
     # A product is not there yet in the first spectra: what it will become is judged by the
     # largest of the other signals; the reference may be of any strength.
-    followed = list(zip(areas, plan.all, strict=True))[0 if plan.reference is None else 1 :]
-    per_proton = max((area / signal.protons for area, signal in followed), default=0.0)
+    per_proton = max(
+        (
+            area / signal.protons
+            for area, signal in zip(areas, signals, strict=True)
+            if signal is not reference and signal.species
+        ),
+        default=0.0,
+    )
     flags = []
-    for area, signal in zip(areas, plan.all, strict=True):
+    for area, signal in zip(areas, signals, strict=True):
         straight = window_weights(axis, signal.window, local_baseline=True).full(axis.size)
         plain = window_weights(axis, signal.window, local_baseline=False).full(axis.size)
         under = float((plain - straight) @ rest)
         noise = sd * float(
             np.sqrt(noise_covariance((plain - straight)[None, :], correlation)[0, 0])
         )
-        size = area if signal is plan.reference else max(area, per_proton * signal.protons)
+        size = area if signal is reference else max(area, per_proton * signal.protons)
         flags.append(
-            not signal.exchanging
+            bool(signal.species)
+            and not signal.exchanging
             and size > 0
             and abs(under) > _LOCAL_SHARE * size
             and abs(under) > _LOCAL_SIGNIFICANCE * noise
