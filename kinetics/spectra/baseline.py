@@ -12,6 +12,7 @@ from dataclasses import dataclass
 
 import numpy as np
 from scipy.linalg import cho_solve_banded, cholesky_banded
+from scipy.ndimage import binary_dilation, binary_opening
 
 from kinetics.spectra.model import Axis, Float32, Float64
 
@@ -21,6 +22,13 @@ MOST_BLOCKS = 1024
 # Waves longer than this are followed by half or more. Humps of suppressed solvents and of
 # first-point errors are wider; an exchanging proton's line must be declared to be protected.
 HALF_RESPONSE_PPM = 1.5
+# Blocks that stand out by so many of their standard deviations, in groups narrower than this and
+# not more than this part of all, are lines rather than baseline.
+_STRAY_SD = 5.0
+_WIDEST_STRAY_PPM = 0.3
+_MOST_STRAY = 0.15
+_FOOT_BLOCKS = 4
+_ROUNDS = 5
 
 
 def merged(ranges: Ranges) -> tuple[tuple[float, float], ...]:
@@ -56,6 +64,7 @@ class BaselineOperator:
     factor: Float64
     left: np.ndarray[tuple[int], np.dtype[np.intp]]
     share: Float32
+    widest_stray: int
 
     def blocks(self, intensities: Float32 | Float64) -> Float64:
         """Return the mean of the free points of each block (0 where none), shape (blocks,)."""
@@ -73,8 +82,33 @@ class BaselineOperator:
         return np.asarray(low + (high - low) * self.share, np.float32)
 
     def apply(self, intensities: Float32 | Float64) -> Float32:
-        """Return the baseline of a spectrum, shape (n,)."""
-        return self.spread(self.smooth(self.blocks(intensities)))
+        """Return the baseline of a spectrum, shape (n,).
+
+        Linear but for lines that stand outside the protected ranges, as an impurity does that
+        was not there when the run began: their blocks count as if they lay on the curve.
+        """
+        means = self.blocks(intensities)
+        curve = self.smooth(means)
+        for _ in range(_ROUNDS):
+            stray = self._stray(means - curve)
+            if not stray.any():
+                break
+            curve = self.smooth(np.where(stray, curve, means))
+        return self.spread(curve)
+
+    def _stray(self, rest: Float64) -> np.ndarray[tuple[int], np.dtype[np.bool_]]:
+        """Blocks that stand far above the curve in narrow groups, shape (blocks,)."""
+        known = self.counts > 0
+        scaled = rest * np.sqrt(self.counts)
+        sd = 1.4826 * float(np.median(np.abs(scaled[known]))) if known.any() else 0.0
+        high = known & (scaled > _STRAY_SD * sd)
+        if sd == 0.0 or high.sum() > _MOST_STRAY * known.sum():
+            return np.zeros_like(high)
+        # What is broad is baseline, whatever its height.
+        broad = binary_opening(high, np.ones(self.widest_stray + 1, bool))
+        narrow = np.logical_and(high, np.logical_not(broad))
+        # The feet of a line lie below the threshold.
+        return np.logical_and(known, binary_dilation(narrow, iterations=_FOOT_BLOCKS))
 
     def transposed(self, weights: Float64) -> Float64:
         """Return W'c for weights c: a sum c·(y − Wy) equals (c − W'c)·y. Shape (n,)."""
@@ -110,4 +144,12 @@ def baseline_operator(
     position = np.interp(np.arange(axis.size), centres, np.arange(blocks))
     left = np.minimum(position.astype(np.intp), blocks - 2)
     share = (position - left).astype(np.float32)
-    return BaselineOperator(free, edges, counts, cholesky_banded(band, lower=True), left, share)
+    return BaselineOperator(
+        free,
+        edges,
+        counts,
+        cholesky_banded(band, lower=True),
+        left,
+        share,
+        max(round(_WIDEST_STRAY_PPM / block_ppm), 1),
+    )
