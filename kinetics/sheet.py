@@ -342,7 +342,16 @@ def parse_sheet(text: str, origin: str) -> Sheet:
         return Sheet.model_validate(data)
     except ValidationError as error:
         # A wrong branch of a union is named in brackets by pydantic; the user wrote no such key.
-        lines = [_line(origin, dict(item), data) for item in error.errors(include_url=False)]
+        items = error.errors(include_url=False)
+        # A list is also called too short for entries that are wrong; only the entries are news.
+        wrong = [item["loc"] for item in items if item["type"] != "too_short"]
+        kept = [
+            dict(item)
+            for item in items
+            if item["type"] != "too_short"
+            or not any(loc[: len(item["loc"])] == item["loc"] for loc in wrong)
+        ]
+        lines = [_line(origin, item, data) for item in kept]
         raise SheetError("\n".join(dict.fromkeys(lines))) from None
 
 
