@@ -9,6 +9,7 @@ from __future__ import annotations
 import hashlib
 import re
 from datetime import UTC, datetime
+from itertools import takewhile
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -87,6 +88,7 @@ def _checked(text: str, entries: dict[str, str], size: int) -> int:
     """Check what the parameter file declares; return the number of complex points."""
     if not text.rstrip().endswith("##END="):
         raise NotYetError("the parameter file acqus is not written to its end")
+    _well_formed(text)
     missing = [k for k in ("TD", "SW_h", "SFO1", "BF1") if k not in entries]
     if missing:
         raise UnreadableError(f"the parameter file acqus has no entry {missing[0]}")
@@ -103,6 +105,28 @@ def _checked(text: str, entries: dict[str, str], size: int) -> int:
     if entries.get("PARMODE", "0") not in ("0", ""):
         raise UnreadableError("the folder holds a spectrum of two or more dimensions")
     return int(entries["TD"]) // 2
+
+
+def _well_formed(text: str) -> None:
+    """Refuse what would set the library's parser looking for an end that never comes."""
+    lines = text.splitlines()
+    for place, line in enumerate(lines):
+        key, _, value = line.partition("=")
+        value = value.strip()
+        if not key.startswith("##"):
+            continue
+        body = [value, *takewhile(lambda row: not row.startswith(("##", "$$")), lines[place + 1 :])]
+        if value.startswith("<") and not any(">" in row for row in body):
+            raise UnreadableError(f"the parameter file acqus is damaged at {key[2:40]}: open text")
+        array = re.match(r"\(0\.\.(\d+)\)(.*)", value)
+        if array is not None:
+            items = " ".join([array.group(2), *body[1:]]).split()
+            quoted = sum(item.startswith("<") for item in items)
+            if max(len(items), quoted) < int(array.group(1)) + 1:
+                raise UnreadableError(
+                    f"the parameter file acqus is damaged at {key[2:40]}: "
+                    f"{len(items)} of {int(array.group(1)) + 1} values"
+                )
 
 
 def _raw(source: Source, fid: Path, text: str, p: dict[str, Any], data: Any) -> Raw:
