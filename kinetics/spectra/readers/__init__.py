@@ -3,7 +3,8 @@
 A reader module offers ``completeness(root, source, files) -> str | None`` (what is still missing,
 in words) and ``read(root, source) -> tuple[Raw, ...]``. To add a format: write such a module, add
 it to `READERS`, teach `sniff` (or `kinetics.spectra.arrival`, for folders) to recognise it, and
-add a row to the contract test in ``tests/spectra/test_readers.py``.
+inherit its contract in a test
+(``tests/spectra/reader_contract.py``).
 """
 
 from __future__ import annotations
@@ -21,7 +22,11 @@ if TYPE_CHECKING:
 
 READERS = {
     "raw folder": "kinetics.spectra.readers.raw_folder",
+    "raw series": "kinetics.spectra.readers.series_folder",
+    "processed folder": "kinetics.spectra.readers.processed_folder",
+    "procpar folder": "kinetics.spectra.readers.procpar_folder",
     "JCAMP-DX": "kinetics.spectra.readers.jcamp",
+    "nmrML": "kinetics.spectra.readers.nmrml",
     "text": "kinetics.spectra.readers.text",
 }
 
@@ -58,6 +63,8 @@ def sniff(name: str, size: int, head: bytes) -> str | None:
         return "JCAMP-DX"
     if b"\x00" in head:
         return None
+    if text.startswith(b"<") and re.search(rb"<(?:\w+:)?nmrML[\s>]", text):
+        return "nmrML"
     rows = re.findall(
         rb"^[ \t]*[-+]?\d[\d.,]*(?:[eE][-+]?\d+)?[ \t]*[\s,;][ \t]*[-+]?\d[\d.,eE+-]*[ \t;,]*\r?$",
         text,

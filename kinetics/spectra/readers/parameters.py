@@ -1,0 +1,40 @@
+"""Parameter files `acqus`, `acqu2s` and `procs`: labelled entries ``##$NAME= value``.
+
+nmrglue's own parser never returns from a file that is cut inside a string or an array, so this one
+is used; the tests compare the two.
+"""
+
+import re
+from typing import Any
+
+_ENTRY = re.compile(r"^##\$(\w+)=[ \t]*(.*?)[ \t\r\n]*(?=^##|^\$\$|\Z)", re.M | re.S)
+_ARRAY = re.compile(r"\(0\.\.\d+\)\s*")
+
+
+def is_whole(text: str) -> bool:
+    """Whether the end mark is there."""
+    return text.rstrip().endswith("##END=")
+
+
+def parameter_entries(text: str) -> dict[str, str]:
+    """Return name → value as text, without angle brackets; an array is one text."""
+    return {key: value.strip().strip("<>").strip() for key, value in _ENTRY.findall(text)}
+
+
+def parameters(text: str) -> dict[str, Any]:
+    """Return name → value: int or float where it is a number, a list for an array, else text."""
+    return {key: _value(value) for key, value in parameter_entries(text).items()}
+
+
+def _value(text: str) -> Any:
+    array = _ARRAY.match(text)
+    if array:
+        return [_value(word) for word in text[array.end() :].split()]
+    try:
+        return int(text)
+    except ValueError:
+        pass
+    try:
+        return float(text)
+    except ValueError:
+        return text.strip("<>")
