@@ -14,6 +14,8 @@ import re
 from pathlib import Path
 from typing import TYPE_CHECKING, Protocol, cast
 
+import numpy as np
+
 from kinetics.errors import NotYetError, UnreadableError
 from kinetics.spectra.model import Raw
 
@@ -98,7 +100,9 @@ def read(root: Path, source: Source) -> tuple[Raw, ...]:
         If it cannot be read; the message says why in a chemist's words.
     """
     try:
-        return _reader(source.kind).read(root, source)
+        # Nonsense numbers overflow; what comes of them is checked where they are looked at.
+        with np.errstate(all="ignore"):
+            return _reader(source.kind).read(root, source)
     except (NotYetError, UnreadableError):
         raise
     except MemoryError:

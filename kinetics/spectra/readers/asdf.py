@@ -15,30 +15,35 @@ from kinetics.errors import UnreadableError
 from kinetics.spectra.model import Float64
 
 _PLAIN, _SQZ, _DIF, _DUP = 0, 1, 2, 3
+_MOST_DIGITS = 17
+_POWER = 10 ** np.arange(_MOST_DIGITS + 1, dtype=np.int64)
 
 
-def _tables() -> tuple[bytes, npt.NDArray[np.uint8], dict[bytes, bytes]]:
-    kinds = np.zeros(256, np.uint8)
-    expand: dict[bytes, bytes] = {}
-    for digit, char in enumerate(b"@ABCDEFGHI"):
-        kinds[char] = _SQZ
-        expand[bytes([char])] = b" %d" % digit
-    for digit, char in enumerate(b"abcdefghi", 1):
-        kinds[char] = _SQZ
-        expand[bytes([char])] = b" -%d" % digit
-    for digit, char in enumerate(b"%JKLMNOPQR"):
-        kinds[char] = _DIF
-        expand[bytes([char])] = b" %d" % digit
-    for digit, char in enumerate(b"jklmnopqr", 1):
-        kinds[char] = _DIF
-        expand[bytes([char])] = b" -%d" % digit
-    for digit, char in enumerate(b"STUVWXYZs", 1):
-        kinds[char] = _DUP
-        expand[bytes([char])] = b" %d" % digit
-    return bytes(sorted(b"".join(expand))), kinds, expand
+def _tables() -> tuple[bytes, npt.NDArray[np.uint8], npt.NDArray[np.int64], npt.NDArray[np.bool_]]:
+    """Of each byte: is it a pseudo-digit, of which kind, which digit, and is it negative?"""
+    kinds, digits = np.zeros(256, np.uint8), np.zeros(256, np.int64)
+    negative = np.zeros(256, bool)
+    digits[48:58] = np.arange(10)
+    for kind, first, positive, less in (
+        (_SQZ, 0, b"@ABCDEFGHI", b"abcdefghi"),
+        (_DIF, 0, b"%JKLMNOPQR", b"jklmnopqr"),
+        (_DUP, 1, b"STUVWXYZs", b""),
+    ):
+        for digit, char in enumerate(positive, first):
+            kinds[char], digits[char] = kind, digit
+        for digit, char in enumerate(less, 1):
+            kinds[char], digits[char], negative[char] = kind, digit, True
+    negative[ord("-")] = True
+    return bytes(np.flatnonzero(kinds).astype(np.uint8)), kinds, digits, negative
 
 
-_PSEUDO, _KIND, _EXPAND = _tables()
+_PSEUDO, _KIND, _DIGIT, _NEGATIVE = _tables()
+# What a byte does in a packed line.
+_STRANGE, _BETWEEN, _FIGURE, _BEGINS = 0, 1, 2, 3
+_PART = np.zeros(256, np.uint8)
+_PART[np.frombuffer(b" \t\r\n,;", np.uint8)] = _BETWEEN
+_PART[np.frombuffer(b"0123456789.", np.uint8)] = _FIGURE
+_PART[np.frombuffer(b"+-" + _PSEUDO, np.uint8)] = _BEGINS
 _PSEUDO_SET = re.compile(b"[" + re.escape(_PSEUDO) + b"]")
 _EXPONENT = re.compile(rb"(?<=[\d.])[eE](?=[-+]?\d)")
 _SIGN = re.compile(rb"(?<![eE\s])([-+])")
@@ -95,21 +100,50 @@ def _decode_plain(body: bytes) -> tuple[Float64, Float64]:
 
 
 def _decode_packed(body: bytes, expected: int) -> tuple[Float64, Float64]:
-    # Token kinds in order: pseudo-digits say theirs; a number that begins with a plain digit or
-    # sign after a separator is the abscissa of a line, or a plain ordinate (PAC).
-    spaced = _SIGN.sub(rb" \1", body)
-    marked = _PSEUDO_SET.sub(lambda m: b" " + m.group(), spaced)
-    counts = np.array([len(line.split()) for line in marked.split(b"\n")], np.intp)
-    tokens = marked.split()
-    kinds = _KIND[np.frombuffer(b"".join(t[:1] for t in tokens), np.uint8)]
-    values = _numbers(_PSEUDO_SET.sub(lambda m: _EXPAND[m.group()], marked))
-    if values.size != kinds.size:
+    """Decode all lines at once, byte by byte in numpy.
+
+    A token begins with a pseudo-digit, a sign, or a digit after a separator. The first of each
+    line is the abscissa; the others are whole numbers by the standard.
+    """
+    chars = np.frombuffer(body, np.uint8)
+    part = _PART[chars]
+    if np.any(part == _STRANGE):
+        raise UnreadableError("the data table holds something that is not a number")
+    belongs = part > _BETWEEN
+    before = np.concatenate(([False], belongs[:-1]))
+    begins = (part == _BEGINS) | ((part == _FIGURE) & ~before)
+    starts = np.flatnonzero(begins)
+    if starts.size == 0:
         raise UnreadableError("the data table is damaged")
-    first = np.cumsum(counts) - counts
-    is_x = np.zeros(values.size, bool)
-    is_x[first] = True
-    line_of = np.repeat(np.arange(counts.size), counts)[~is_x]
-    return _undone(values[~is_x], kinds[~is_x], line_of, expected), values[is_x]
+    # The end of a token: the last byte of it, one before a separator or the next beginning.
+    after = np.concatenate((begins[1:] | ~belongs[1:], [True]))
+    lengths = np.flatnonzero(belongs & after) - starts + 1
+    breaks = np.flatnonzero(chars == ord("\n"))
+    line_of = np.searchsorted(breaks, starts)
+    is_x = np.concatenate(([True], np.diff(line_of) > 0))
+    if np.any(lengths > _MOST_DIGITS):
+        raise UnreadableError("the data table holds a number of too many digits")
+    power = _descending(lengths)
+    inside = np.repeat(starts + lengths - 1, lengths) - power
+    figures = chars[inside]
+    first = np.cumsum(lengths) - lengths
+    values = np.add.reduceat(_DIGIT[figures] * _POWER[power], first)
+    less = _NEGATIVE[chars[starts]]
+    numbers = np.where(less, -values, values).astype(np.float64)
+    decimal = np.searchsorted(first, np.flatnonzero(figures == ord(".")), "right") - 1
+    if not np.all(is_x[decimal]):
+        raise UnreadableError("a packed ordinate has decimals")
+    for token in decimal:  # of abscissas only
+        begin = starts[token]
+        numbers[token] = _numbers(body[begin : begin + lengths[token]])[0]
+    kinds = _KIND[chars[starts]]
+    return _undone(numbers[~is_x], kinds[~is_x], line_of[~is_x], expected), numbers[is_x]
+
+
+def _descending(lengths: npt.NDArray[np.intp]) -> npt.NDArray[np.intp]:
+    """For lengths 3, 2: 2, 1, 0, 1, 0."""
+    ends = np.cumsum(lengths)
+    return np.asarray(np.repeat(ends, lengths) - 1 - np.arange(ends[-1]), np.intp)
 
 
 def _undone(

@@ -154,6 +154,7 @@ def carrier_unknown() -> Remark:
 
 
 def rows_present(rows: Complex64) -> int:
-    """Return how many rows of a series have been acquired: those to come are still zero."""
-    filled = np.flatnonzero(rows.any(axis=1))
+    """Return how many rows of a series are there to their end: those to come are still zero."""
+    ends = rows[:, -EMPTY_END_BYTES // 8 :].any(axis=1)
+    filled = np.flatnonzero(ends)
     return int(filled[-1]) + 1 if filled.size else 0

@@ -5,7 +5,10 @@ is used; the tests compare the two.
 """
 
 import re
+from itertools import takewhile
 from typing import Any
+
+from kinetics.errors import UnreadableError
 
 _ENTRY = re.compile(r"^##\$(\w+)=[ \t]*(.*?)[ \t\r\n]*(?=^##|^\$\$|\Z)", re.M | re.S)
 _ARRAY = re.compile(r"\(0\.\.\d+\)\s*")
@@ -38,3 +41,31 @@ def _value(text: str) -> Any:
         return float(text)
     except ValueError:
         return text.strip("<>")
+
+
+def well_formed(text: str) -> None:
+    """Refuse text that was opened and never closed, and arrays shorter than declared.
+
+    Raises
+    ------
+    UnreadableError
+        If there is either; the message names the entry.
+    """
+    lines = text.splitlines()
+    for place, line in enumerate(lines):
+        key, _, value = line.partition("=")
+        value = value.strip()
+        if not key.startswith("##"):
+            continue
+        body = [value, *takewhile(lambda row: not row.startswith(("##", "$$")), lines[place + 1 :])]
+        if value.startswith("<") and not any(">" in row for row in body):
+            raise UnreadableError(f"the parameter file is damaged at {key[2:40]}: open text")
+        array = re.match(r"\(0\.\.(\d+)\)(.*)", value)
+        if array is not None:
+            items = " ".join([array.group(2), *body[1:]]).split()
+            quoted = sum(item.startswith("<") for item in items)
+            if max(len(items), quoted) < int(array.group(1)) + 1:
+                raise UnreadableError(
+                    f"the parameter file is damaged at {key[2:40]}: "
+                    f"{len(items)} of {int(array.group(1)) + 1} values"
+                )

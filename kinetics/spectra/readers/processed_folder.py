@@ -11,6 +11,8 @@ import numpy as np
 from kinetics.errors import NotYetError, UnreadableError
 from kinetics.spectra.model import Axis, Raw, Stamp
 from kinetics.spectra.readers.common import (
+    EMPTY_END,
+    EMPTY_END_BYTES,
     MOST_PARAMETER_BYTES,
     checked_finite,
     checked_nucleus,
@@ -19,7 +21,12 @@ from kinetics.spectra.readers.common import (
     modified,
     number,
 )
-from kinetics.spectra.readers.parameters import is_whole, parameter_entries, parameters
+from kinetics.spectra.readers.parameters import (
+    is_whole,
+    parameter_entries,
+    parameters,
+    well_formed,
+)
 from kinetics.spectra.readers.raw_folder import recycle_s, stamp_of
 
 if TYPE_CHECKING:
@@ -43,6 +50,8 @@ def completeness(root: Path, source: Source, files: FileLayer) -> str | None:
         width = 8 if parameter_entries(text).get("DTYPP") == "2" else 4
         if declared is not None and facts["1r"].size < declared * width:
             return f"{facts['1r'].size} of {declared * width:g} bytes of the spectrum are there"
+    if "1r" in facts and not any(files.tail(root / facts["1r"].name, EMPTY_END_BYTES)):
+        return EMPTY_END
     return None
 
 
@@ -61,6 +70,7 @@ def read(root: Path, source: Source) -> tuple[Raw, ...]:
         texts[name] = path.read_bytes().decode("latin-1")
         if not is_whole(texts[name]):
             raise NotYetError(f"the parameter file {name} is not written to its end")
+        well_formed(texts[name])
     p = parameter_entries(texts["procs"])
     q = parameter_entries(texts.get("acqus", ""))
     if q.get("PARMODE", "0") not in ("0", ""):

@@ -23,6 +23,8 @@ from kinetics.remarks import Remark
 from kinetics.spectra.model import Axis, Complex64, Float32, Raw, Stamp
 from kinetics.spectra.readers import procpar
 from kinetics.spectra.readers.common import (
+    EMPTY_END,
+    EMPTY_END_BYTES,
     MOST_PARAMETER_BYTES,
     MOST_ROWS,
     carrier_unknown,
@@ -31,6 +33,7 @@ from kinetics.spectra.readers.common import (
     checked_points,
     checked_scale,
     clipped,
+    holes,
     modified,
     rows_present,
 )
@@ -78,13 +81,15 @@ def completeness(root: Path, source: Source, files: FileLayer) -> str | None:
         head = files.head(root / data.name, _HEADER)
         if len(head) < _HEADER:
             return f"{data.size} bytes of data are there, not even their header"
-        declared = header(head).total_bytes
+        shape = header(head)
     except NotYetError as why:
         return str(why)
     except UnreadableError:
         return None  # reading will say so
-    if data.size < declared:
-        return f"{data.size} of {declared} bytes of data are there"
+    if data.size < shape.total_bytes:
+        return f"{data.size} of {shape.total_bytes} bytes of data are there"
+    if shape.blocks == 1 and not any(files.tail(root / data.name, EMPTY_END_BYTES)):
+        return EMPTY_END
     return None
 
 
@@ -215,7 +220,9 @@ def _raw(
     right = None if rfl is None else (rfp or 0.0) - rfl
     remarks: list[Remark] = []
     axis, carrier = None, 0.0
-    data: Complex64 | Float32 = np.conj(values).astype(np.complex64)  # here positive frequencies lie at lower ppm (memory)
+    data: Complex64 | Float32 = np.conj(values).astype(
+        np.complex64
+    )  # here positive frequencies lie at lower ppm (memory)
     if facts.is_spectrum:
         step = -width / frequency / values.size
         axis = Axis(((right or 0.0) + width) / frequency, step, values.size)
@@ -227,7 +234,7 @@ def _raw(
     else:
         carrier = (right + width / 2) / frequency
     if axis is None:
-        remarks.extend(clipped(values))
+        remarks.extend((*clipped(values), *holes(values)))
     shot, delay = _number(entries, "at"), _number(entries, "d1", row)
     scans = max(int(_number(entries, "ct") or _number(entries, "nt") or 1), 1)
     recycle = None if shot is None else shot + (delay or 0.0)

@@ -27,7 +27,12 @@ from kinetics.spectra.readers.common import (
     modified,
     moment,
 )
-from kinetics.spectra.readers.parameters import is_whole, parameter_entries, parameters
+from kinetics.spectra.readers.parameters import (
+    is_whole,
+    parameter_entries,
+    parameters,
+    well_formed,
+)
 
 if TYPE_CHECKING:
     from kinetics.spectra.arrival import FileLayer, Source
@@ -93,6 +98,7 @@ def _checked(text: str, entries: dict[str, str], size: int) -> int:
         raise NotYetError("the parameter file acqus is not written to its end")
     if entries.get("PARMODE", "0") not in ("0", ""):
         raise UnreadableError("the folder holds a spectrum of two or more dimensions")
+    well_formed(text)
     missing = [k for k in ("TD", "SW_h", "SFO1", "BF1") if k not in entries]
     if missing:
         raise UnreadableError(f"the parameter file acqus has no entry {missing[0]}")

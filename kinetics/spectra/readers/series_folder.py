@@ -24,11 +24,17 @@ from kinetics.spectra.readers.common import (
     checked_points,
     checked_scale,
     clipped,
+    holes,
     modified,
     moment,
     rows_present,
 )
-from kinetics.spectra.readers.parameters import is_whole, parameter_entries, parameters
+from kinetics.spectra.readers.parameters import (
+    is_whole,
+    parameter_entries,
+    parameters,
+    well_formed,
+)
 from kinetics.spectra.readers.raw_folder import (
     exponent_of,
     group_delay,
@@ -86,6 +92,7 @@ def read(root: Path, source: Source) -> tuple[Raw, ...]:
         texts[name] = (folder / name).read_bytes().decode("latin-1")
         if not is_whole(texts[name]):
             raise NotYetError(f"the parameter file {name} is not written to its end")
+        well_formed(texts[name])
     entries, second = parameter_entries(texts["acqus"]), parameter_entries(texts["acqu2s"])
     # A second axis with a width of its own belongs to a two-dimensional spectrum.
     if second.get("NUC1", "off").strip() not in ("off", "", "1H"):
@@ -189,7 +196,7 @@ def _raw(
         source=f"{source.name}#{row + 1}",
         sha256=hashlib.sha256(content + b"#%d" % (row + 1)).hexdigest(),
         format="raw instrument folder, series",
-        remarks=(*remarks, *clipped(values)),
+        remarks=(*remarks, *clipped(values), *holes(values)),
     )
 
 
