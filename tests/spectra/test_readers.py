@@ -134,7 +134,7 @@ class TestEveryReader:
     [
         ("##$NUC1= <1H>", "##$NUC1= <13C>", "13C"),
         ("##$TD= 8192", "##$TD= 819200000", "points"),
-        ("##$SW_h= 1600", "##$SW_h= 0", "make no sense"),
+        ("##$SW_h= 1600", "##$SW_h= 0", "makes no sense"),
         ("##$BF1=", "##$XX1=", "no entry BF1"),
         ("##$NUC1= <1H>", "##$NUC1= <1H", "open text"),
     ],
