@@ -1,11 +1,14 @@
 """What is remarked on in a spectrum, with every threshold and its reason in one place."""
 
+from collections.abc import Sequence
+
 import numpy as np
 
 from kinetics.remarks import Remark
 from kinetics.signals.calibration import Calibration
 from kinetics.signals.integrals import coverage, standard_errors
 from kinetics.signals.model import FollowPlan, Integrals
+from kinetics.signals.multiplet import MultipletFit
 from kinetics.spectra.model import Spectrum
 
 # An integral ratio good to 1 % wants S/N 150 to 250 of the reference line (memory: Malz & Jancke
@@ -20,6 +23,10 @@ PHASE_DISAGREEMENT_DEG = 8.0
 MOVED_PPM = 0.1
 # A negative integral beyond noise means phase or baseline, never chemistry.
 NEGATIVE_SIGMA = 5.0
+# A fit of overlapping signals leaves 0.1–0.5 % of the variance under bad shim; a missing line or
+# a wrong coupling leaves several per cent. Both must hold: at poor S/N noise alone leaves much.
+PATTERN_UNEXPLAINED = 0.01
+PATTERN_EXCESS = 3.0
 
 
 def remarks_on(
@@ -27,6 +34,7 @@ def remarks_on(
     integrals: Integrals,
     plan: FollowPlan,
     calibration: Calibration,
+    fits: Sequence[MultipletFit] = (),
 ) -> tuple[Remark, ...]:
     """Return what is to be remarked on in one measured spectrum.
 
@@ -36,10 +44,13 @@ def remarks_on(
         The spectrum and what was measured in it.
     plan, calibration
         Of the run.
+    fits
+        Of overlapping signals.
     """
     out: list[Remark] = list(spectrum.remarks)
     out += _reference(spectrum, integrals, plan, calibration)
     out += _phase(spectrum, plan)
+    out += _fits(fits, plan)
     errors = standard_errors(integrals)
     offset = 0 if plan.reference is None else 1
     biggest = float(np.max(np.abs(integrals.values))) if integrals.values.size else 0.0
@@ -72,6 +83,29 @@ def remarks_on(
                 )
             )
     return tuple(out)
+
+
+def _fits(fits: Sequence[MultipletFit], plan: FollowPlan) -> list[Remark]:
+    out = []
+    for fit in fits:
+        names = " and ".join(dict.fromkeys(plan.all[i].species for i in fit.members))
+        unexplained = 1.0 - fit.explained
+        if fit.excess > PATTERN_EXCESS and unexplained > PATTERN_UNEXPLAINED:
+            out.append(
+                Remark(
+                    "pattern-mismatch",
+                    f"The n + 1 patterns stated for {names} explain "
+                    f"{100 * fit.explained:.1f} % of the variance in their windows, and what is "
+                    f"left is {fit.excess:.0f} times the noise.",
+                    "The areas may be off by several per cent.",
+                    "Check the couplings in the sheet; protons that couple with each other and "
+                    "stand close do not follow n + 1 (strong coupling), and another signal may "
+                    "lie under them.",
+                    doubtful=True,
+                    subject=names,
+                )
+            )
+    return out
 
 
 def _reference(
