@@ -8,6 +8,7 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
+from scipy.interpolate import CubicSpline
 
 from kinetics.errors import UnreadableError
 from kinetics.signals.lineshape import measured_shape
@@ -150,7 +151,13 @@ def calibrate(raws: Sequence[Raw], plan: FollowPlan, version: int = 1) -> Calibr
         response=response,
         others=tuple(other.signal for other in others),
         model=_line_model(
-            plan, corrected, axis, (width_ppm, lorentz_share), sd, correlation, frequency
+            plan,
+            corrected,
+            axis,
+            (width_ppm if plan.reference is None else own_widths[0], lorentz_share),
+            sd,
+            correlation,
+            frequency,
         ),
     )
 
@@ -257,7 +264,10 @@ def _mean_spectrum(parts: Sequence[Phased], axes: Sequence[Axis]) -> Float32:
     total = parts[0].values.astype(np.float64)
     ppm = axes[0].ppm()[::-1]
     for part, axis in zip(parts[1:], axes[1:], strict=True):
-        total += np.interp(ppm, axis.ppm()[::-1], part.values[::-1])[::-1]
+        # Linear interpolation would widen narrow lines.
+        placed = CubicSpline(axis.ppm()[::-1], part.values[::-1].astype(np.float64))
+        inside = (ppm >= axis.ppm()[-1]) & (ppm <= axis.first_ppm)
+        total += np.where(inside, placed(ppm), 0.0)[::-1]
     return np.asarray(total / len(parts), np.float32)
 
 

@@ -15,6 +15,9 @@ FOLLOW_PPM = 0.025
 # A signal is followed only while it still looks like itself; fading, it is soon outshone by
 # whatever else stands in its window.
 LIKENESS = 0.85
+# Sums over windows that overlap this badly cannot be told apart; each is then taken as it is (and
+# remarked on), since taking them apart would only multiply noise.
+MOST_CONDITION = 100.0
 # An exchanging proton wanders farther.
 FOLLOW_EXCHANGING_PPM = 0.05
 
@@ -110,7 +113,10 @@ def _solved(
         known[start:stop] = fit.areas
         known_cov[start:stop, start:stop] = fit.covariance
         start = stop
-    inverse = np.linalg.inv(mixing[np.ix_(summed, summed)])
+    own = mixing[np.ix_(summed, summed)]
+    if np.linalg.cond(own) > MOST_CONDITION:
+        own = np.diag(np.diag(own))
+    inverse = np.linalg.inv(own)
     tails = mixing[np.ix_(summed, fitted)]
     values, covariance = np.zeros(sums.size), np.zeros((sums.size, sums.size))
     values[fitted], covariance[np.ix_(fitted, fitted)] = known, known_cov

@@ -24,8 +24,9 @@ from kinetics.signals.model import FollowPlan, Signal
 from kinetics.signals.pattern import sticks
 from kinetics.spectra.model import Axis, Float32, Float64
 
-# Usual spreads. Shift: of a signal seen in the calibration, in reference line-widths; of one not
-# seen there, as a part of its window or of the distance to a neighbour's middle. Coupling: relative to the sheet's. Width: in line-widths.
+# Usual spreads. Shift of a signal seen in the calibration, in reference line-widths; of one not
+# seen there, as a part of its window or of the distance to a neighbour's middle. Coupling:
+# relative to the sheet's. Width: in line-widths.
 _SHIFT_SEEN = 0.5
 _ROOM, _ROOM_GAP = 0.15, 0.45
 _COUPLING = 0.03

@@ -1,6 +1,7 @@
 """What is remarked on in a spectrum, with every threshold and its reason in one place."""
 
 from collections.abc import Sequence
+from itertools import combinations
 
 import numpy as np
 
@@ -27,6 +28,8 @@ NEGATIVE_SIGMA = 5.0
 # a wrong coupling leaves several per cent. Both must hold: at poor S/N noise alone leaves much.
 PATTERN_UNEXPLAINED = 0.01
 PATTERN_EXCESS = 3.0
+# A twentieth of a window holds but tails; from a fifth on a line of one may lie in both.
+OVERLAP_SEEN, OVERLAP_DOUBTFUL = 0.05, 0.2
 
 
 def remarks_on(
@@ -51,6 +54,7 @@ def remarks_on(
     out += _reference(spectrum, integrals, plan, calibration)
     out += _phase(spectrum, plan)
     out += _fits(fits, plan)
+    out += _overlaps(fits, plan)
     errors = standard_errors(integrals)
     offset = 0 if plan.reference is None else 1
     biggest = float(np.max(np.abs(integrals.values))) if integrals.values.size else 0.0
@@ -103,6 +107,29 @@ def _fits(fits: Sequence[MultipletFit], plan: FollowPlan) -> list[Remark]:
                     "lie under them.",
                     doubtful=True,
                     subject=names,
+                )
+            )
+    return out
+
+
+def _overlaps(fits: Sequence[MultipletFit], plan: FollowPlan) -> list[Remark]:
+    """Summed windows that share a part of the spectrum."""
+    fitted = {index for fit in fits for index in fit.members}
+    summed = [s for i, s in enumerate(plan.all) if i not in fitted]
+    out = []
+    for a, b in combinations(summed, 2):
+        shared = min(a.window[1], b.window[1]) - max(a.window[0], b.window[0])
+        part = shared / min(a.width, b.width)
+        if part > OVERLAP_SEEN:
+            out.append(
+                Remark(
+                    "windows-overlap",
+                    f"The windows of {a.species} and {b.species} share {shared:.3f} ppm, "
+                    f"{100 * part:.0f} % of the narrower one.",
+                    "What lies there counts for both.",
+                    'Narrow the windows, or give both method = "multiplet".',
+                    doubtful=part > OVERLAP_DOUBTFUL,
+                    subject=f"{a.species} and {b.species}",
                 )
             )
     return out
