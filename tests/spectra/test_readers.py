@@ -191,7 +191,8 @@ def encodings(tmp_path_factory: pytest.TempPathFactory) -> Path:
     subprocess.run([*pip, *wanted], check=True)
     (archive,) = home.glob("jcamp-1.3.2.tar.gz")
     with tarfile.open(archive) as packed:
-        packed.extractall(home, filter="data")
+        # Older patch releases of Python do not know the filter yet; newer ones insist on it.
+        packed.extractall(home, **({"filter": "data"} if hasattr(tarfile, "data_filter") else {}))
     return home
 
 
