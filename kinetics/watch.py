@@ -22,6 +22,7 @@ from kinetics.signals.model import FollowPlan
 from kinetics.spectra.arrival import Look, LookMemory, Source, look
 from kinetics.spectra.model import Raw
 from kinetics.spectra.readers.worker import Outcome, ReadingWorker
+from kinetics.temperature import changed_text
 
 log = logging.getLogger(__name__)
 
@@ -90,7 +91,8 @@ class Follower:
         self._progress = progress or (lambda _done, _total: None)
         self._memories: dict[str, LookMemory] = {}
         self._border = ReadingWorker()
-        # (source, what is missing) of those that reading found not to be complete after all.
+        self._temperature_log: tuple[int, int] | None = None
+        # What reading found not to be complete after all.
         self._not_yet: list[tuple[str, str]] = []
         self._signatures = record.known_signatures()
         # Rows of one file are recorded as name#1, name#2, …; they stand and fall with the file.
@@ -151,6 +153,7 @@ class Follower:
             newest[0] != self._work.sheet_version or self._sheet_file_changed()
         ):
             self._work = self._sheet_in_force()
+        self._keep_temperature_log()
         self._catch_up()
         looks = [(prefix, root, self._look(prefix, root)) for prefix, root in self._roots()]
         fresh = [
@@ -170,15 +173,11 @@ class Follower:
         trouble = "; ".join(seen.trouble for _, _, seen in looks if seen.trouble)
         return Cycle(taken, waiting, trouble)
 
-    def close(self) -> None:
-        """End the process that reads."""
-        self._border.close()
-
     def __enter__(self) -> "Follower":
         return self
 
     def __exit__(self, *_: object) -> None:
-        self.close()
+        self._border.close()
 
     def finish(self) -> int:
         """End a finite job: spectra that never could be calibrated on become unreadable.
@@ -198,6 +197,20 @@ class Follower:
             self._put(batch)
         self._work.held_back = []
         return len(batch)
+
+    def _keep_temperature_log(self) -> None:
+        """Copy the temperature log into the record, so that a logbook needs no other file."""
+        asked = self._work.sheet.temperature
+        if asked is None:
+            return
+        try:
+            found = changed_text(self.sheet_path.parent / asked.log, self._temperature_log)
+        except OSError as why:
+            log.debug("temperature log: %s", why)
+            return
+        if found is not None:
+            text, self._temperature_log = found
+            self.record.set_meta("temperature_log", text)
 
     def _sheet_file_changed(self) -> bool:
         try:

@@ -178,8 +178,8 @@ def _recorded(
     """Start and end by the recorded stamp, and whether both are certain."""
     length = settings.acquisition_s or stamp.duration_s
     zone = ZoneInfo(settings.zone)
-    start = None if stamp.start is None else _utc(stamp.start, zone, after)
-    end = None if stamp.end is None else _utc(stamp.end, zone, start or after)
+    start = None if stamp.start is None else in_utc(stamp.start, zone, after)
+    end = None if stamp.end is None else in_utc(stamp.end, zone, start or after)
     if start is not None and end is not None:
         return (start, end), True
     gap = timedelta(seconds=length or 0.0)
@@ -190,7 +190,7 @@ def _recorded(
     return None, True
 
 
-def _utc(moment: datetime, zone: ZoneInfo, after: datetime | None) -> datetime:
+def in_utc(moment: datetime, zone: ZoneInfo, after: datetime | None = None) -> datetime:
     """Give a local moment its zone; of the two hours when summer time ends, take the one that
     does not lie before `after`."""
     if moment.tzinfo is not None:
@@ -207,3 +207,11 @@ def _from_file(stamp: Stamp, settings: ClockSettings) -> Span | None:
         return None
     length = timedelta(seconds=settings.acquisition_s or stamp.duration_s or 0.0)
     return stamp.modified - length, stamp.modified
+
+
+def seconds_since(start: datetime | None, moments: tuple[datetime | None, ...]) -> Float64:
+    """Return seconds from a start, nan where a moment is unknown, shape (n,)."""
+    return np.array(
+        [np.nan if t is None or start is None else (t - start).total_seconds() for t in moments],
+        np.float64,
+    )
