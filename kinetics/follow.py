@@ -95,7 +95,7 @@ def _once(folder: Path, sheet_path: Path, record: Record, stop: threading.Event)
     if not counts:
         raise NothingToDoError(
             f"{folder}: nothing here could be measured; expected raw instrument folders, "
-            "JCAMP-DX or two-column text"
+            "JCAMP-DX, nmrML or two-column text"
             + (f" ({len(last.waiting)} not complete yet)" if last.waiting else "")
         )
     words = ", ".join(f"{n} {state}" for state, n in counts.items())

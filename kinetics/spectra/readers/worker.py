@@ -142,6 +142,7 @@ class ReadingWorker:
         self._process: _Process | None = None
         self._ending: weakref.finalize[Any, Any] | None = None
         self._stalled: dict[tuple[str, str], tuple[str, int]] = {}
+        self._series: tuple[tuple[Path, str, str], tuple[Raw, ...]] | None = None
 
     def __enter__(self) -> ReadingWorker:
         return self
@@ -162,9 +163,14 @@ class ReadingWorker:
         NotYetError, UnreadableError
             As there, and as the table above says.
         """
+        key = (root, source.name, source.signature)
+        if self._series is not None and self._series[0] == key:
+            return self._series[1]
         (outcome,) = self.read_all([(root, source)])
         if isinstance(outcome, Exception):
             raise outcome
+        # A file of many rows is asked for once for each of them: the last one stays at hand.
+        self._series = (key, outcome) if len(outcome) > 1 else None
         return outcome
 
     def read_all(self, items: Sequence[Item]) -> Iterator[Outcome]:
