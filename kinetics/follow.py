@@ -80,11 +80,11 @@ def _once(folder: Path, sheet_path: Path, record: Record, stop: threading.Event)
         bar.n = done
         bar.refresh()
 
-    follower = Follower(folder, sheet_path, record, progress)
-    follower.cycle()
-    stop.wait(ONCE_GAP_S)
-    last = follower.cycle()
-    follower.finish()
+    with Follower(folder, sheet_path, record, progress) as follower:
+        follower.cycle()
+        stop.wait(ONCE_GAP_S)
+        last = follower.cycle()
+        follower.finish()
     if bar is not None:
         bar.close()
     for name, why in last.waiting:
@@ -95,7 +95,7 @@ def _once(folder: Path, sheet_path: Path, record: Record, stop: threading.Event)
     if not counts:
         raise NothingToDoError(
             f"{folder}: nothing here could be measured; expected raw instrument folders, "
-            "JCAMP-DX or two-column text"
+            "JCAMP-DX, nmrML or two-column text"
             + (f" ({len(last.waiting)} not complete yet)" if last.waiting else "")
         )
     words = ", ".join(f"{n} {state}" for state, n in counts.items())
@@ -113,9 +113,18 @@ def _live(
     every_s: float,
     stop: threading.Event,
 ) -> int:
-    follower = Follower(folder, sheet_path, record)
-    record.tell("following", f"following {folder} began")
-    log.info("following %s into %s; stop with Ctrl-C", folder, record.folder)
+    with Follower(folder, sheet_path, record) as follower:
+        _cycles(follower, record, holder, every_s, stop)
+    record.tell("stopped", "following was stopped")
+    log.info("stopped")
+    return 0
+
+
+def _cycles(
+    follower: Follower, record: Record, holder: str, every_s: float, stop: threading.Event
+) -> None:
+    record.tell("following", f"following {follower.folder} began")
+    log.info("following %s into %s; stop with Ctrl-C", follower.folder, record.folder)
     trouble = ""
     while not stop.is_set():
         try:
@@ -136,9 +145,6 @@ def _live(
                 record.tell("trouble-over", "the run folder and the sheet can be read again")
         lease.beat(record.connection, holder, trouble or "following")
         stop.wait(every_s)
-    record.tell("stopped", "following was stopped")
-    log.info("stopped")
-    return 0
 
 
 @contextmanager

@@ -162,7 +162,7 @@ def table_of(run: Run, scale: Scale) -> Facts:
                 for v, u in zip(run.amounts.values[row], errors[row], strict=True)
             ]
         seconds = float(run.time_s[i])
-        kelvin = entry.facts.get("temperature_k")
+        kelvin = run.temperatures_k[i]
         body.append(
             {
                 "number": i + 1,

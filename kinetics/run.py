@@ -23,8 +23,9 @@ from kinetics.remarks import Remark
 from kinetics.sheet import Event, Sheet, parse_sheet
 from kinetics.signals.amounts import concentrations
 from kinetics.signals.model import Concentrations
-from kinetics.spectra.clock import ClockSettings, Timeline, timeline
+from kinetics.spectra.clock import ClockSettings, Timeline, in_utc, seconds_since, timeline
 from kinetics.spectra.model import Float64, Stamp
+from kinetics.temperature import Logged, join, remarks_on
 from kinetics.version import __version__
 
 STATES = ("measured", "doubtful", "set-aside", "unreadable")
@@ -54,6 +55,8 @@ class Run:
         All decisions, oldest first.
     zone
         Time zone frozen in the logbook.
+    temperature_log
+        Text of the temperature log as the follower last saw it, None where there is none.
     """
 
     logbook: Path
@@ -65,6 +68,7 @@ class Run:
     timeline: Timeline
     decisions: tuple[Decision, ...]
     zone: str
+    temperature_log: str | None = None
 
     @cached_property
     def aside(self) -> dict[str, str]:
@@ -96,10 +100,10 @@ class Run:
     def _start(self) -> tuple[datetime | None, str]:
         zone = ZoneInfo(self.zone)
         if self.sheet.started is not None:
-            return _aware(self.sheet.started, zone), "started in the sheet"
+            return in_utc(self.sheet.started, zone), "started in the sheet"
         starts = [event.at for event in self.sheet.events if event.kind == "start"]
         if starts:
-            return min(_aware(at, zone) for at in starts), "the start event in the sheet"
+            return min(in_utc(at, zone) for at in starts), "the start event in the sheet"
         times = [t for t in self.timeline.start if t is not None]
         return (min(times), "the first acquisition's start") if times else (None, "nothing yet")
 
@@ -137,7 +141,7 @@ class Run:
         zone = ZoneInfo(self.zone)
         volume = np.full(self.measured.size, self.sheet.vessel.volume_ml)
         for event in added:
-            at = (_aware(event.at, zone) - self.started).total_seconds()
+            at = (in_utc(event.at, zone) - self.started).total_seconds()
             volume[self.time_s[self.measured] > at] += event.volume_ml or 0.0
         return self.sheet.vessel.volume_ml / volume
 
@@ -207,20 +211,33 @@ class Run:
             return None, "the first spectrum"
         zone = ZoneInfo(self.zone)
         later = [
-            ((_aware(event.at, zone) - self.started).total_seconds(), event.kind)
+            ((in_utc(event.at, zone) - self.started).total_seconds(), event.kind)
             for event in self.sheet.events
             if event.kind in ("start", "dose")
         ]
         at, kind = max(later, default=(0.0, ""))
         return (at, f"the last {kind}") if at > 0 else (None, "the first spectrum")
 
+    @cached_property
+    def _logged(self) -> Logged:
+        """What the sheet's temperature log says, where it names one."""
+        spans = self.timeline.start, self.timeline.end
+        return join(self.temperature_log, self.sheet, self.zone, *spans)
+
+    @cached_property
+    def temperatures_k(self) -> tuple[float | None, ...]:
+        """Temperature of each entry in K: the log's, else what the file recorded, else None."""
+        if self._logged.kelvin is not None:
+            return self._logged.kelvin
+        seen = [entry.facts.get("temperature_k") for entry in self.entries]
+        return tuple(float(t) if t else None for t in seen)
+
     @property
     def temperature_k(self) -> float | None:
-        """Temperature of the run in K: the sheet's, else the mean that the files recorded."""
+        """Temperature of the run in K: the sheet's, else the mean of the spectra's."""
         if self.sheet.temperature_c is not None:
             return self.sheet.temperature_c + 273.15
-        seen = [e.facts.get("temperature_k") for e in self.entries]
-        known = [float(t) for t in seen if t]
+        known = [t for t in self.temperatures_k if t is not None]
         return float(np.mean(known)) if known else None
 
     @property
@@ -231,6 +248,8 @@ class Run:
     def remarks(self) -> tuple[Remark, ...]:
         """Return what concerns the run as a whole: the clock, the receiver."""
         out = list(self.timeline.remarks)
+        if self.sheet.temperature is not None:
+            out += remarks_on(self._logged, [self.temperatures_k[i] for i in self.measured])
         if self.sheet.reference.kind == "none":
             out.append(
                 Remark(
@@ -261,6 +280,7 @@ def load_run(logbook: Path) -> Run:
         sheet = parse_sheet(sheets[version].text, f"{logbook}, sheet version {version}")
         entries, decisions = view.entries(), view.decisions()
         zone = sheet.time.zone or view.meta("zone") or "UTC"
+        temperature_log = view.meta("temperature_log")
     line = _timeline(entries, sheet, zone)
     order = _time_order(line, entries)
     return Run(
@@ -273,6 +293,7 @@ def load_run(logbook: Path) -> Run:
         timeline=line.ordered(order),
         decisions=decisions,
         zone=zone,
+        temperature_log=temperature_log,
     )
 
 
@@ -331,19 +352,6 @@ def _time_order(line: Timeline, entries: tuple[Entry, ...]) -> list[int]:
     return sorted(range(len(entries)), key=lambda i: (line.mid[i] or far, i))
 
 
-def _aware(moment: datetime, zone: ZoneInfo) -> datetime:
-    """Give a moment without an offset the run's zone; return it in UTC."""
-    return (moment if moment.tzinfo else moment.replace(tzinfo=zone)).astimezone(UTC)
-
-
-def seconds_since(start: datetime | None, moments: tuple[datetime | None, ...]) -> Float64:
-    """Return seconds from a start, nan where a moment is unknown, shape (n,)."""
-    return np.array(
-        [np.nan if t is None or start is None else (t - start).total_seconds() for t in moments],
-        np.float64,
-    )
-
-
 def fit_words(run: Run, result: Study) -> list[str]:
     """Return what ``fit`` prints for people."""
     from kinetics.rates.words import rounded, with_interval
@@ -386,7 +394,7 @@ def event_times(run: Run) -> list[tuple[float, Event]]:
         return []
     zone = ZoneInfo(run.zone)
     pairs = [
-        ((_aware(event.at, zone) - run.started).total_seconds(), event)
+        ((in_utc(event.at, zone) - run.started).total_seconds(), event)
         for event in run.sheet.events
     ]
     return sorted(pairs, key=lambda pair: pair[0])

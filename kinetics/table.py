@@ -24,8 +24,8 @@ def rows(run: Run) -> tuple[list[str], list[list[str]]]:
     errors = run.amounts.standard_uncertainty
     out = []
     for i, entry in enumerate(run.entries):
-        kelvin = entry.facts.get("temperature_k")
-        celsius = run.sheet.temperature_c if kelvin is None else float(kelvin) - 273.15
+        kelvin = run.temperatures_k[i]
+        celsius = run.sheet.temperature_c if kelvin is None else kelvin - 273.15
         cells = [
             entry.source,
             run.states[i],

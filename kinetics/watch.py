@@ -6,6 +6,7 @@ so a follower that was killed goes on where the record stands.
 
 import logging
 import os
+import re
 import time
 from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass, field, replace
@@ -20,7 +21,8 @@ from kinetics.signals.calibration import Calibration, calibrate
 from kinetics.signals.model import FollowPlan
 from kinetics.spectra.arrival import Look, LookMemory, Source, look
 from kinetics.spectra.model import Raw
-from kinetics.spectra.readers import read
+from kinetics.spectra.readers.worker import Outcome, ReadingWorker
+from kinetics.temperature import changed_text
 
 log = logging.getLogger(__name__)
 
@@ -88,7 +90,14 @@ class Follower:
         self.folder, self.sheet_path, self.record = folder, sheet_path, record
         self._progress = progress or (lambda _done, _total: None)
         self._memories: dict[str, LookMemory] = {}
+        self._border = ReadingWorker()
+        self._temperature_log: tuple[int, int] | None = None
+        # What reading found not to be complete after all.
+        self._not_yet: list[tuple[str, str]] = []
         self._signatures = record.known_signatures()
+        # Rows of one file are recorded as name#1, name#2, …; they stand and fall with the file.
+        for name, signature in list(self._signatures.items()):
+            self._signatures.setdefault(re.sub(r"#\d+$", "", name), signature)
         record.remember("zone", local_zone())
         record.remember("run_folder", str(folder.resolve()))
         self._work = self._sheet_in_force()
@@ -144,6 +153,7 @@ class Follower:
             newest[0] != self._work.sheet_version or self._sheet_file_changed()
         ):
             self._work = self._sheet_in_force()
+        self._keep_temperature_log()
         self._catch_up()
         looks = [(prefix, root, self._look(prefix, root)) for prefix, root in self._roots()]
         fresh = [
@@ -153,14 +163,21 @@ class Follower:
             if self._signatures.get(prefix + source.name) != source.signature
         ]
         taken = 0
+        self._not_yet = []
         for batch in _batches(fresh, self._room):
             taken += self._take(batch)
             self._progress(taken, len(fresh))
         waiting = tuple(
             (prefix + name, why) for prefix, _, seen in looks for name, why in seen.waiting
-        )
+        ) + tuple(self._not_yet)
         trouble = "; ".join(seen.trouble for _, _, seen in looks if seen.trouble)
         return Cycle(taken, waiting, trouble)
+
+    def __enter__(self) -> "Follower":
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        self._border.close()
 
     def finish(self) -> int:
         """End a finite job: spectra that never could be calibrated on become unreadable.
@@ -180,6 +197,20 @@ class Follower:
             self._put(batch)
         self._work.held_back = []
         return len(batch)
+
+    def _keep_temperature_log(self) -> None:
+        """Copy the temperature log into the record, so that a logbook needs no other file."""
+        asked = self._work.sheet.temperature
+        if asked is None:
+            return
+        try:
+            found = changed_text(self.sheet_path.parent / asked.log, self._temperature_log)
+        except OSError as why:
+            log.debug("temperature log: %s", why)
+            return
+        if found is not None:
+            text, self._temperature_log = found
+            self.record.set_meta("temperature_log", text)
 
     def _sheet_file_changed(self) -> bool:
         try:
@@ -213,25 +244,28 @@ class Follower:
 
     def _take(self, batch: Sequence[tuple[str, Path, Source]]) -> int:
         taken: list[Taken] = []
-        for prefix, root, source in batch:
-            taken.extend(self._measured(prefix, root, source))
+        outcomes = self._border.read_all([(root, source) for _, root, source in batch])
+        for (prefix, root, source), outcome in zip(batch, outcomes, strict=True):
+            taken.extend(self._measured(prefix, root, source, outcome))
         self._put(taken)
         self._maybe_recalibrate()
         return len(taken)
 
-    def _measured(self, prefix: str, root: Path, source: Source) -> Iterator[Taken]:
+    def _measured(
+        self, prefix: str, root: Path, source: Source, outcome: Outcome
+    ) -> Iterator[Taken]:
         name = prefix + source.name
-        try:
-            raws = read(root, source)
-        except NotYetError as why:
-            log.info("%s is not complete yet: %s", name, why)
+        if isinstance(outcome, NotYetError):
+            log.info("%s is not complete yet: %s", name, outcome)
+            self._not_yet.append((name, str(outcome)))
             return
-        except UnreadableError as why:
-            yield Taken(None, name, source.fallback_hash(root), source.signature, None, str(why))
+        if isinstance(outcome, UnreadableError):
+            digest = source.fallback_hash(root)
+            yield Taken(None, name, digest, source.signature, None, str(outcome))
             self._signatures[name] = source.signature
             return
         self._signatures[name] = source.signature
-        for raw in raws:
+        for raw in outcome:
             yield from self._one(source, _renamed(raw, prefix))
 
     def _one(self, source: Source, raw: Raw) -> Iterator[Taken]:
@@ -324,7 +358,8 @@ class Follower:
         for prefix, root in reversed(self._roots()):
             if source.startswith(prefix):
                 try:
-                    for raw in read(root, Source.named(root, source.removeprefix(prefix))):
+                    lies = Source.named(root, source.removeprefix(prefix))
+                    for raw in self._border.read(root, lies):
                         if raw.sha256 == sha256:
                             return _renamed(raw, prefix)
                 except (UnreadableError, NotYetError, OSError) as why:

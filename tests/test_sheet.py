@@ -76,7 +76,6 @@ def test_all_mistakes_at_once() -> None:
     ("addition", "key"),
     [
         ("[notify]\nevents = []\n", "notify"),
-        ('[temperature]\nlog = "bath.csv"\n', "temperature"),
         ("[[signals]]\nspecies = 'b'\nwindow = [1, 2]\nprotons = 1\nt1_s = 2\n", "signals.t1_s"),
     ],
 )

@@ -178,11 +178,12 @@ def _recorded(
     """Start and end by the recorded stamp, and whether both are certain."""
     length = settings.acquisition_s or stamp.duration_s
     zone = ZoneInfo(settings.zone)
-    start = None if stamp.start is None else _utc(stamp.start, zone, after)
-    end = None if stamp.end is None else _utc(stamp.end, zone, start or after)
+    gap = timedelta(seconds=length or 0.0)
+    near = None if stamp.modified is None else stamp.modified - gap
+    start = None if stamp.start is None else in_utc(stamp.start, zone, after, near)
+    end = None if stamp.end is None else in_utc(stamp.end, zone, start or after, stamp.modified)
     if start is not None and end is not None:
         return (start, end), True
-    gap = timedelta(seconds=length or 0.0)
     if start is not None:
         return (start, start + gap), length is not None
     if end is not None:
@@ -190,14 +191,39 @@ def _recorded(
     return None, True
 
 
-def _utc(moment: datetime, zone: ZoneInfo, after: datetime | None) -> datetime:
-    """Give a local moment its zone; of the two hours when summer time ends, take the one that
-    does not lie before `after`."""
+# A file time this close to one of the two readings of an ambiguous stamp tells them apart.
+_WRITTEN_WITHIN = timedelta(minutes=20)
+
+
+def in_utc(
+    moment: datetime,
+    zone: ZoneInfo,
+    after: datetime | None = None,
+    written: datetime | None = None,
+) -> datetime:
+    """Give a local moment its zone; return it in UTC.
+
+    Parameters
+    ----------
+    moment
+        With an offset, or local to `zone`.
+    zone
+        Of moments without an offset.
+    after
+        Of the two hours when summer time ends, the one is taken that does not lie before this.
+    written
+        When the file was written: tells the two hours apart where the order does not (spectra
+        hours apart), if it lies close to one of them.
+    """
     if moment.tzinfo is not None:
         return moment.astimezone(UTC)
     first = moment.replace(tzinfo=zone, fold=0).astimezone(UTC)
     second = moment.replace(tzinfo=zone, fold=1).astimezone(UTC)
-    if second > first and after is not None and first < after - timedelta(seconds=1):
+    if second <= first:
+        return first
+    if after is not None and first < after - timedelta(seconds=1):
+        return second
+    if written is not None and abs(written - second) < _WRITTEN_WITHIN:
         return second
     return first
 
@@ -207,3 +233,11 @@ def _from_file(stamp: Stamp, settings: ClockSettings) -> Span | None:
         return None
     length = timedelta(seconds=settings.acquisition_s or stamp.duration_s or 0.0)
     return stamp.modified - length, stamp.modified
+
+
+def seconds_since(start: datetime | None, moments: tuple[datetime | None, ...]) -> Float64:
+    """Return seconds from a start, nan where a moment is unknown, shape (n,)."""
+    return np.array(
+        [np.nan if t is None or start is None else (t - start).total_seconds() for t in moments],
+        np.float64,
+    )

@@ -64,6 +64,23 @@ def test_a_night_across_the_change_to_winter_time() -> None:
     assert line.remarks == ()
 
 
+@pytest.mark.parametrize("hour", [0, 1])
+def test_spectra_hours_apart_are_told_by_when_their_file_was_written(hour: int) -> None:
+    """02:30 in Berlin is 00:30 or 01:30 UTC; every two hours the order does not tell which."""
+    true = datetime(2026, 10, 25, hour, 30, tzinfo=UTC)
+    local = datetime(2026, 10, 25, 2, 30)
+    given = [
+        stamp(true - timedelta(hours=4), None, 60.0),
+        stamp(local, None, 60.0, true + timedelta(seconds=75)),
+    ]
+    line = timeline(given, ["1", "2"], ClockSettings(zone="Europe/Berlin"))
+    assert line.start[1] == true
+    # Copied later, the file's time tells nothing: the first of the two is taken.
+    copied = [given[0], stamp(local, None, 60.0, true + timedelta(days=2))]
+    line = timeline(copied, ["1", "2"], ClockSettings(zone="Europe/Berlin"))
+    assert line.start[1] == datetime(2026, 10, 25, 0, 30, tzinfo=UTC)
+
+
 def test_missing_stamps_fall_back_and_say_so() -> None:
     given = [stamp(AT, None, 60.0), stamp(None, None, 60.0, AT + timedelta(seconds=200))]
     line = timeline(given, ["1", "2"], ClockSettings())

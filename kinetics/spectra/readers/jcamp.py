@@ -199,6 +199,8 @@ def _ntuples(block: dict[str, Record], pages: list[Record], is_fid: bool) -> Tab
         raise UnreadableError("the table of variables holds something that is no number") from None
     if "R" not in data:
         raise UnreadableError("the file lacks the real part")
+    if "I" in data and data["I"].size != data["R"].size:
+        raise UnreadableError("real and imaginary parts differ in length")
     if is_fid and "I" not in data:
         raise UnreadableError("the file lacks the imaginary part of the FID")
     return Table(data["R"], data.get("I"), first, last, of("UNITS", "X").upper(), is_fid)

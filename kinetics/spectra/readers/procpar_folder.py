@@ -144,7 +144,7 @@ def read(root: Path, source: Source) -> tuple[Raw, ...]:
         facts = header(head)
         if size < facts.total_bytes:
             raise NotYetError(f"{size} of {facts.total_bytes} bytes of data are there")
-        if size > facts.total_bytes + 4096:
+        if size > facts.total_bytes:
             raise UnreadableError(
                 f"the data file holds {size} bytes, {facts.total_bytes} are declared"
             )

@@ -38,6 +38,10 @@ if TYPE_CHECKING:
     from kinetics.spectra.arrival import FileLayer, Source
 
 
+# Data are padded to blocks of so many bytes.
+ROW_BLOCK = 1024
+
+
 def completeness(root: Path, source: Source, files: FileLayer) -> str | None:
     """Return what is still missing: files, the end mark of `acqus`, or declared points."""
     facts = {f.name.rpartition("/")[2]: f for f in source.files}
@@ -108,7 +112,7 @@ def _checked(text: str, entries: dict[str, str], size: int) -> int:
     checked_points(int(entries["TD"]) // 2)
     if size < declared:
         raise NotYetError(f"{size} of {declared} bytes of data are there")
-    if size > declared + 4096:
+    if size > -(-declared // ROW_BLOCK) * ROW_BLOCK:
         raise UnreadableError(
             f"the data file holds {size} bytes, {declared} are declared: "
             "this looks like several FIDs in one file, or two dimensions"

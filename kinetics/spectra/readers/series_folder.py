@@ -36,6 +36,7 @@ from kinetics.spectra.readers.parameters import (
     well_formed,
 )
 from kinetics.spectra.readers.raw_folder import (
+    ROW_BLOCK,
     exponent_of,
     group_delay,
     recycle_s,
@@ -43,8 +44,6 @@ from kinetics.spectra.readers.raw_folder import (
 
 if TYPE_CHECKING:
     from kinetics.spectra.arrival import FileLayer, Source
-
-_ROW_BLOCK = 1024
 
 
 def completeness(root: Path, source: Source, files: FileLayer) -> str | None:
@@ -77,7 +76,7 @@ def _row_bytes(entries: dict[str, str]) -> int:
         ) from None
     checked_points(numbers // 2)
     size = numbers * (8 if entries.get("DTYPA") == "2" else 4)
-    return -(-size // _ROW_BLOCK) * _ROW_BLOCK
+    return -(-size // ROW_BLOCK) * ROW_BLOCK
 
 
 def read(root: Path, source: Source) -> tuple[Raw, ...]:
@@ -101,7 +100,8 @@ def read(root: Path, source: Source) -> tuple[Raw, ...]:
         raise UnreadableError("the folder holds a spectrum of two dimensions, not a series")
     row_bytes = _row_bytes(entries)
     ser = folder / "ser"
-    content = _content(ser, row_bytes)
+    declared = _declared_rows(second)
+    content = _content(ser, row_bytes, declared)
     numbers = int(entries["TD"])
     kind = "f8" if entries.get("DTYPA") == "2" else "i4"
     order = ">" if entries.get("BYTORDA", "0").strip() == "1" else "<"
@@ -111,12 +111,9 @@ def read(root: Path, source: Source) -> tuple[Raw, ...]:
     scale = 2.0 ** exponent_of(facts)
     stored = np.ascontiguousarray(blocks[:, :size]).view(order + kind) * scale
     rows = (stored[:, 0 : numbers - 1 : 2] + 1j * stored[:, 1::2]).astype(np.complex64)
-    declared = _declared_rows(second)
     there = rows_present(rows)
     if there == 0:
         raise NotYetError("no row of the series has been acquired yet")
-    if there > declared:
-        raise UnreadableError(f"{there} rows are there, {declared} are declared")
     return tuple(
         _raw(source, ser, facts, rows[i], i, blocks[i].tobytes(), declared, _waits(folder))
         for i in range(there)
@@ -124,10 +121,14 @@ def read(root: Path, source: Source) -> tuple[Raw, ...]:
     )
 
 
-def _content(path: Path, row_bytes: int) -> bytes:
+def _content(path: Path, row_bytes: int, rows: int) -> bytes:
     size = path.stat().st_size
     if size > MOST_BYTES:
         raise UnreadableError("the series is too large to be read at once")
+    if size > rows * row_bytes:
+        raise UnreadableError(
+            f"the series holds {size} bytes, {rows} rows of {row_bytes} are declared"
+        )
     content = path.read_bytes()[: size // row_bytes * row_bytes]
     if not content:
         raise NotYetError("the first row is not complete yet")

@@ -22,15 +22,19 @@ from __future__ import annotations
 
 import contextlib
 import logging
+import os
+import pickle
+import queue
 import signal
+import subprocess
 import sys
+import threading
+import weakref
 from collections.abc import Iterator, Sequence
-from multiprocessing import get_context
-from multiprocessing.connection import Connection
-from multiprocessing.context import SpawnProcess
 from pathlib import Path
+from typing import IO, Any
 
-from kinetics.errors import NotYetError, UnreadableError
+from kinetics.errors import KettlewatchError, NotYetError, UnreadableError
 from kinetics.spectra.arrival import Source
 from kinetics.spectra.model import Raw
 from kinetics.spectra.readers import read
@@ -46,6 +50,69 @@ SILENCE_S = 10.0
 MEMORY_BYTES = 512 << 20
 _START_S = 60.0
 _STALLS = 3
+
+
+class _Process:
+    """A worker process, its requests a pipe, its replies a queue that holds two."""
+
+    def __init__(self, processor_s: float, memory_bytes: int) -> None:
+        home = str(Path(__file__).resolve().parents[3])
+        code = (
+            f"import sys; sys.path.insert(0, {home!r}); "
+            f"from kinetics.spectra.readers.worker import serve; "
+            f"serve({processor_s!r}, {memory_bytes!r})"
+        )
+        self.popen = subprocess.Popen(
+            [sys.executable, "-c", code],
+            stdin=subprocess.PIPE,
+            stdout=subprocess.PIPE,
+            stderr=subprocess.DEVNULL,
+        )
+        assert self.popen.stdin is not None
+        assert self.popen.stdout is not None
+        self._requests: IO[bytes] = self.popen.stdin
+        self._replies: queue.Queue[Any] = queue.Queue(2)
+        self._over = threading.Event()
+        threading.Thread(
+            target=_collect, args=(self.popen.stdout, self._replies, self._over), daemon=True
+        ).start()
+
+    def ask(self, items: Sequence[Item]) -> None:
+        """Send a batch of requests; OSError if the process has gone."""
+        pickle.dump(list(items), self._requests)
+        self._requests.flush()
+
+    def reply(self, within_s: float) -> Any:
+        """Return the next reply; EOFError if the process has gone, queue.Empty in vain."""
+        found = self._replies.get(timeout=within_s)
+        if found is None:
+            raise EOFError
+        return found
+
+    def end(self) -> None:
+        """End the process."""
+        self._over.set()
+        self.popen.kill()
+        with contextlib.suppress(OSError):
+            self._requests.close()
+        # One that hangs in a dead share ends when the share answers.
+        with contextlib.suppress(subprocess.TimeoutExpired):
+            self.popen.wait(timeout=2.0)
+
+
+def _collect(stream: IO[bytes], replies: queue.Queue[Any], over: threading.Event) -> None:
+    """Hand replies on until the process goes; None is the last."""
+    found: Any = ()
+    with stream:
+        while found is not None:
+            try:
+                found = pickle.load(stream)
+            except (EOFError, OSError, ValueError, pickle.UnpicklingError):
+                found = None
+            while not over.is_set():
+                with contextlib.suppress(queue.Full):
+                    replies.put(found, timeout=0.2)
+                    break
 
 
 class ReadingWorker:
@@ -72,9 +139,10 @@ class ReadingWorker:
     ) -> None:
         self._limits = (processor_s, memory_bytes)
         self._silence_s = silence_s
-        self._process: SpawnProcess | None = None
-        self._connection: Connection | None = None
+        self._process: _Process | None = None
+        self._ending: weakref.finalize[Any, Any] | None = None
         self._stalled: dict[tuple[str, str], tuple[str, int]] = {}
+        self._series: tuple[tuple[Path, str, str], tuple[Raw, ...]] | None = None
 
     def __enter__(self) -> ReadingWorker:
         return self
@@ -85,7 +153,7 @@ class ReadingWorker:
     @property
     def process_id(self) -> int | None:
         """Of the process that reads now; None before the first request."""
-        return None if self._process is None else self._process.pid
+        return None if self._process is None else self._process.popen.pid
 
     def read(self, root: Path, source: Source) -> tuple[Raw, ...]:
         """Read one source; see `kinetics.spectra.readers.read`.
@@ -95,9 +163,14 @@ class ReadingWorker:
         NotYetError, UnreadableError
             As there, and as the table above says.
         """
+        key = (root, source.name, source.signature)
+        if self._series is not None and self._series[0] == key:
+            return self._series[1]
         (outcome,) = self.read_all([(root, source)])
         if isinstance(outcome, Exception):
             raise outcome
+        # A file of many rows is asked for once for each of them: the last one stays at hand.
+        self._series = (key, outcome) if len(outcome) > 1 else None
         return outcome
 
     def read_all(self, items: Sequence[Item]) -> Iterator[Outcome]:
@@ -107,16 +180,16 @@ class ReadingWorker:
         """
         at = 0
         while at < len(items):
-            connection = self._running()
+            process = self._running()
             try:
-                connection.send(list(items[at:]))
+                process.ask(items[at:])
                 while at < len(items):
-                    yield self._reply(connection, items[at])
+                    yield self._reply(process, items[at])
                     at += 1
             except (EOFError, OSError):
                 yield self._after_a_death(items[at])
                 at += 1
-            except _StalledError:
+            except queue.Empty:
                 self.close()
                 yield self._after_a_stall(items[at])
                 at += 1
@@ -126,61 +199,51 @@ class ReadingWorker:
 
     def close(self) -> None:
         """End the process."""
-        if self._connection is not None:
-            self._connection.close()
-        if self._process is not None:
-            self._process.kill()
-            # One that hangs in a dead share ends when the share answers.
-            self._process.join(timeout=2.0)
-        self._process = self._connection = None
+        if self._ending is not None:
+            self._ending()
+        self._process = self._ending = None
 
-    def _reply(self, connection: Connection, item: Item) -> Outcome:
-        if not connection.poll(self._silence_s):
-            raise _StalledError
-        outcome: Outcome = connection.recv()
+    def _reply(self, process: _Process, item: Item) -> Outcome:
+        outcome: Outcome = process.reply(self._silence_s)
         self._stalled.pop((str(item[0]), item[1].name), None)
         return outcome
 
-    def _running(self) -> Connection:
-        if self._connection is not None and self._process is not None and self._process.is_alive():
-            return self._connection
+    def _running(self) -> _Process:
+        if self._process is not None and self._process.popen.poll() is None:
+            return self._process
         self.close()
-        context = get_context("spawn")
-        ours, theirs = context.Pipe()
-        self._process = context.Process(
-            target=_serve, args=(theirs, *self._limits), daemon=True, name="kettlewatch-reading"
-        )
-        self._process.start()
-        theirs.close()
-        self._connection = ours
-        if not ours.poll(_START_S):
+        process = _Process(*self._limits)
+        self._process = process
+        self._ending = weakref.finalize(self, process.end)
+        try:
+            process.reply(_START_S)  # "ready"
+        except (EOFError, queue.Empty):
             self.close()
-            raise UnreadableError("the reading process does not start")
-        ours.recv()
-        return ours
+            raise KettlewatchError("the process that reads spectra does not start") from None
+        return process
 
     def _after_a_death(self, item: Item) -> Outcome:
         if self._died_of_time():
             return UnreadableError(_TOO_LONG)
         log.warning("the reading process ended at %s; trying again", item[1].name)
-        connection = self._running()
+        process = self._running()
         try:
-            connection.send([item])
-            return self._reply(connection, item)
+            process.ask([item])
+            return self._reply(process, item)
         except (EOFError, OSError):
             if self._died_of_time():
                 return UnreadableError(_TOO_LONG)
             return UnreadableError("the file brings the reading process down: it is damaged")
-        except _StalledError:
+        except queue.Empty:
             self.close()
             return self._after_a_stall(item)
 
     def _died_of_time(self) -> bool:
-        process = self._process
-        if process is None:
+        if self._process is None:
             return False
-        process.join(timeout=2.0)
-        return process.exitcode in (-_TIME_SIGNAL, None) if _TIME_SIGNAL else False
+        with contextlib.suppress(subprocess.TimeoutExpired):
+            self._process.popen.wait(timeout=2.0)
+        return _TIME_SIGNAL > 0 and self._process.popen.returncode == -_TIME_SIGNAL
 
     def _after_a_stall(self, item: Item) -> Outcome:
         key, signature = (str(item[0]), item[1].name), item[1].signature
@@ -194,24 +257,27 @@ class ReadingWorker:
         return NotYetError(f"reading takes longer than {self._silence_s:g} s; tried again")
 
 
-class _StalledError(Exception):
-    """No reply came in time."""
-
-
 _TOO_LONG = "reading takes far longer than any good file does: it is damaged"
 _TIME_SIGNAL = int(signal.SIGPROF) if hasattr(signal, "SIGPROF") else 0
 
 
-def _serve(connection: Connection, processor_s: float, memory_bytes: int) -> None:
-    """Read what is asked for until the other side goes."""
+def serve(processor_s: float, memory_bytes: int) -> None:
+    """Read what is asked for on standard input until that ends: the worker's side."""
     signal.signal(signal.SIGINT, signal.SIG_IGN)  # Ctrl-C is the owner's to handle
+    requests, replies = sys.stdin.buffer, os.fdopen(os.dup(1), "wb")
+    os.dup2(2, 1)  # whatever a library prints must not mix with the replies
     _import_readers()
     _limit_memory(memory_bytes)
-    connection.send("ready")
     with contextlib.suppress(EOFError, OSError):
+        _send(replies, "ready")
         while True:
-            for root, source in connection.recv():
-                connection.send(_outcome(root, source, processor_s))
+            for root, source in pickle.load(requests):
+                _send(replies, _outcome(root, source, processor_s))
+
+
+def _send(replies: IO[bytes], what: object) -> None:
+    pickle.dump(what, replies, protocol=5)
+    replies.flush()
 
 
 def _outcome(root: Path, source: Source, processor_s: float) -> Outcome:
