@@ -10,7 +10,7 @@ from kinetics.remarks import Remark
 from kinetics.sheet import Sheet
 from kinetics.signals.amounts import AmountRule
 from kinetics.signals.calibration import Calibration
-from kinetics.signals.integrals import integrate
+from kinetics.signals.integrals import fit_multiplets, integrate
 from kinetics.signals.model import FollowPlan, Integrals, Signal
 from kinetics.signals.quality import remarks_on
 from kinetics.spectra.model import Axis, Float32, ProcessingRecord, Raw, Spectrum
@@ -156,8 +156,9 @@ def measure(raw: Raw, recipe: Recipe) -> Measurement:
     if not np.all(np.isfinite(raw.data)):
         raise UnreadableError("the data contain values that are not numbers")
     spectrum = process(raw, plan.settings, calibration.shared)
-    integrals = integrate(spectrum, plan, calibration)
-    remarks = remarks_on(spectrum, integrals, plan, calibration)
+    fits = fit_multiplets(spectrum, plan, calibration)
+    integrals = integrate(spectrum, plan, calibration, fits)
+    remarks = remarks_on(spectrum, integrals, plan, calibration, fits)
     doubtful = any(remark.doubtful for remark in remarks)
     return Measurement(
         state="doubtful" if doubtful else "measured",

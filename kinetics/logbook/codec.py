@@ -14,6 +14,7 @@ import numpy as np
 from kinetics.remarks import Remark
 from kinetics.signals.calibration import Calibration
 from kinetics.signals.model import Integrals, Signal
+from kinetics.signals.multiplet import LineModel
 from kinetics.signals.response import Response
 from kinetics.spectra.align import Template
 from kinetics.spectra.matched import GroupShapes
@@ -83,6 +84,12 @@ def calibration_to_bytes(calibration: Calibration) -> bytes:
     arrays["others"] = np.array([o.window for o in calibration.others], np.float64).reshape(-1, 2)
     arrays["groups_first"] = np.array(shared.groups.first_ppm, np.float64)
     arrays["groups_step"] = shared.groups.step_ppm
+    if calibration.model is not None:
+        model = calibration.model
+        arrays["model_shape"] = model.shape
+        arrays["model_line"] = np.array([model.step_ppm, model.width_ppm])
+        arrays["model_places"] = model.places_ppm
+        arrays["model_correlation"] = model.correlation
     for index, group in enumerate(shared.groups.shapes):
         arrays[f"group_{index}"] = group
     for index, shape in enumerate(calibration.shapes):
@@ -121,7 +128,13 @@ def calibration_from_bytes(data: bytes) -> Calibration:
         others=tuple(
             Signal("", (float(low), float(high)), 1.0, follow=False) for low, high in a["others"]
         ),
+        model=_line_model(a) if "model_shape" in a else None,
     )
+
+
+def _line_model(a: dict[str, Any]) -> LineModel:
+    step, width = (float(v) for v in a["model_line"])
+    return LineModel(a["model_shape"], step, width, a["model_places"], a["model_correlation"])
 
 
 def remarks_to_json(remarks: Iterable[Remark]) -> str:

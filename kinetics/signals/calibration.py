@@ -8,9 +8,12 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
+from scipy.interpolate import CubicSpline
 
 from kinetics.errors import UnreadableError
+from kinetics.signals.lineshape import measured_shape
 from kinetics.signals.model import FollowPlan, Signal
+from kinetics.signals.multiplet import SEEN, LineModel, fit_group, fitted_groups
 from kinetics.signals.pattern import SHARE_SD, USUAL_SHARE, fitted_shape, sticks
 from kinetics.signals.response import Response, make_response
 from kinetics.signals.undeclared import undeclared
@@ -74,6 +77,8 @@ class Calibration:
         How sums over windows answer to line areas, and the noise of the sums.
     others
         Windows of strong lines nobody declared; they stand behind the plan's in `response`.
+    model
+        What joint fits of overlapping signals start from; None where the plan asks for none.
     """
 
     version: int
@@ -85,6 +90,7 @@ class Calibration:
     shape_step_ppm: float
     response: Response
     others: tuple[Signal, ...] = ()
+    model: LineModel | None = None
 
 
 def calibrate(raws: Sequence[Raw], plan: FollowPlan, version: int = 1) -> Calibration:
@@ -120,6 +126,7 @@ def calibrate(raws: Sequence[Raw], plan: FollowPlan, version: int = 1) -> Calibr
     lines = [_lines_of(corrected, axis, signal, sd, frequency) for signal in plan.all]
     others = undeclared(corrected, axis, plan, sd, width_ppm)
     lorentz_share, own_widths = _line_shapes(plan, corrected, axis, lines, width_ppm, sd)
+    correlation = _noise_colour(parts)
     response = make_response(
         [*plan.all, *(other.signal for other in others)],
         plan.reference,
@@ -130,7 +137,7 @@ def calibrate(raws: Sequence[Raw], plan: FollowPlan, version: int = 1) -> Calibr
         [*own_widths, *(other.width_ppm for other in others)],
         lorentz_share,
         None if settings.baseline == "none" else baseline_operator_for(axis, settings, occupied),
-        _noise_colour(parts),
+        correlation,
         sd,
     )
     return Calibration(
@@ -143,7 +150,49 @@ def calibrate(raws: Sequence[Raw], plan: FollowPlan, version: int = 1) -> Calibr
         shape_step_ppm=axis.step_ppm,
         response=response,
         others=tuple(other.signal for other in others),
+        model=_line_model(
+            plan,
+            corrected,
+            axis,
+            (width_ppm if plan.reference is None else own_widths[0], lorentz_share),
+            sd,
+            correlation,
+            frequency,
+        ),
     )
+
+
+def _line_model(
+    plan: FollowPlan,
+    corrected: Float32,
+    axis: Axis,
+    line: tuple[float, float],
+    sd: float,
+    correlation: Float64,
+    frequency: float,
+) -> LineModel | None:
+    """Shape of the reference line, and where the signals that are fitted together stand."""
+    groups = fitted_groups(plan)
+    if not groups:
+        return None
+    centre, singlet = float("nan"), False
+    if plan.reference is not None:
+        centre, height = _top(corrected, axis, plan.reference)
+        singlet = height > SHAPE_SNR * sd
+    shape = measured_shape(corrected, axis, centre, *line, sd, singlet=singlet)
+    places = np.full(len(plan.all), np.nan)
+    model = LineModel(shape, axis.step_ppm, line[0], places, correlation)
+    found = places.copy()
+    for members in groups:
+        fit = fit_group(corrected, axis, frequency, plan.all, members, model, 0.0, sd)
+        if fit is None:
+            continue
+        for place, index in enumerate(members):
+            low, high = plan.all[index].window
+            error = float(np.sqrt(fit.covariance[place, place]))
+            if fit.areas[place] > SEEN * error and low < fit.shifts_ppm[place] < high:
+                found[index] = fit.shifts_ppm[place]
+    return LineModel(shape, axis.step_ppm, line[0], found, correlation)
 
 
 def _noise_colour(parts: Sequence[Phased]) -> Float64:
@@ -215,7 +264,10 @@ def _mean_spectrum(parts: Sequence[Phased], axes: Sequence[Axis]) -> Float32:
     total = parts[0].values.astype(np.float64)
     ppm = axes[0].ppm()[::-1]
     for part, axis in zip(parts[1:], axes[1:], strict=True):
-        total += np.interp(ppm, axis.ppm()[::-1], part.values[::-1])[::-1]
+        # Linear interpolation would widen narrow lines.
+        placed = CubicSpline(axis.ppm()[::-1], part.values[::-1].astype(np.float64))
+        inside = (ppm >= axis.ppm()[-1]) & (ppm <= axis.first_ppm)
+        total += np.where(inside, placed(ppm), 0.0)[::-1]
     return np.asarray(total / len(parts), np.float32)
 
 

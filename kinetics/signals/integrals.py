@@ -1,9 +1,12 @@
 """Integrals of one spectrum: windows that follow, sums, and their covariance."""
 
+from collections.abc import Sequence
+
 import numpy as np
 
 from kinetics.signals.calibration import SHAPE_SNR, Calibration
 from kinetics.signals.model import FollowPlan, Integrals, Signal
+from kinetics.signals.multiplet import MultipletFit, fit_group, fitted_groups
 from kinetics.signals.windows import window_weights
 from kinetics.spectra.model import Axis, Float32, Float64, Spectrum
 
@@ -12,11 +15,42 @@ FOLLOW_PPM = 0.025
 # A signal is followed only while it still looks like itself; fading, it is soon outshone by
 # whatever else stands in its window.
 LIKENESS = 0.85
+# Sums over windows that overlap this badly cannot be told apart; each is then taken as it is (and
+# remarked on), since taking them apart would only multiply noise.
+MOST_CONDITION = 100.0
 # An exchanging proton wanders farther.
 FOLLOW_EXCHANGING_PPM = 0.05
 
 
-def integrate(spectrum: Spectrum, plan: FollowPlan, calibration: Calibration) -> Integrals:
+def fit_multiplets(
+    spectrum: Spectrum, plan: FollowPlan, calibration: Calibration
+) -> tuple[MultipletFit, ...]:
+    """Fit the groups of overlapping signals of a spectrum together."""
+    if calibration.model is None:
+        return ()
+    extra = _width_ppm(spectrum, calibration) - calibration.response.line_width_ppm
+    fits = (
+        fit_group(
+            spectrum.intensities,
+            spectrum.axis,
+            spectrum.frequency_mhz,
+            plan.all,
+            members,
+            calibration.model,
+            extra,
+            spectrum.noise_sd,
+        )
+        for members in fitted_groups(plan)
+    )
+    return tuple(fit for fit in fits if fit is not None)
+
+
+def integrate(
+    spectrum: Spectrum,
+    plan: FollowPlan,
+    calibration: Calibration,
+    fits: Sequence[MultipletFit] = (),
+) -> Integrals:
     """Integrate the reference and all signals of a spectrum.
 
     Parameters
@@ -27,6 +61,9 @@ def integrate(spectrum: Spectrum, plan: FollowPlan, calibration: Calibration) ->
         What is followed.
     calibration
         Of the run.
+    fits
+        From `fit_multiplets`: these signals are not summed, and their tails in the windows of
+        the others are taken off.
 
     Returns
     -------
@@ -51,12 +88,52 @@ def integrate(spectrum: Spectrum, plan: FollowPlan, calibration: Calibration) ->
         weights = window_weights(axis, other.window, local_baseline=False)
         sums[index] = weights.of(spectrum.intensities)
     response = calibration.response
-    inverse = np.linalg.inv(response.at_width(_width_ppm(spectrum, calibration)))
+    mixing = response.at_width(_width_ppm(spectrum, calibration))
     # The response was prepared on the calibration's point distance; noise of a sum of points
     # scales with its square root.
     scale = abs(axis.step_ppm / calibration.shape_step_ppm)
-    covariance = inverse @ response.noise @ inverse.T * spectrum.noise_sd**2 * scale
-    return Integrals((inverse @ sums)[:count], covariance[:count, :count], offsets, heights)
+    noise_of_sums = response.noise * spectrum.noise_sd**2 * scale
+    values, covariance = _solved(mixing, sums, noise_of_sums, fits)
+    for fit in fits:
+        for place, index in enumerate(fit.members):
+            offsets[index] = fit.shifts_ppm[place] - _usual_place(plan, calibration, index)
+    return Integrals(values[:count], covariance[:count, :count], offsets, heights)
+
+
+def _solved(
+    mixing: Float64, sums: Float64, noise: Float64, fits: Sequence[MultipletFit]
+) -> tuple[Float64, Float64]:
+    """Areas and covariance of the summed signals, given those that were fitted."""
+    fitted = np.array([index for fit in fits for index in fit.members], np.intp)
+    summed = np.setdiff1d(np.arange(sums.size), fitted)
+    known, known_cov = np.zeros(fitted.size), np.zeros((fitted.size, fitted.size))
+    start = 0
+    for fit in fits:
+        stop = start + fit.areas.size
+        known[start:stop] = fit.areas
+        known_cov[start:stop, start:stop] = fit.covariance
+        start = stop
+    own = mixing[np.ix_(summed, summed)]
+    if np.linalg.cond(own) > MOST_CONDITION:
+        own = np.diag(np.diag(own))
+    inverse = np.linalg.inv(own)
+    tails = mixing[np.ix_(summed, fitted)]
+    values, covariance = np.zeros(sums.size), np.zeros((sums.size, sums.size))
+    values[fitted], covariance[np.ix_(fitted, fitted)] = known, known_cov
+    values[summed] = inverse @ (sums[summed] - tails @ known)
+    rest = noise[np.ix_(summed, summed)] + tails @ known_cov @ tails.T
+    covariance[np.ix_(summed, summed)] = inverse @ rest @ inverse.T
+    # The noise of windows and fitted ranges is that of different points: they only share tails.
+    cross = -inverse @ tails @ known_cov
+    covariance[np.ix_(summed, fitted)] = cross
+    covariance[np.ix_(fitted, summed)] = cross.T
+    return values, covariance
+
+
+def _usual_place(plan: FollowPlan, calibration: Calibration, index: int) -> float:
+    model = calibration.model
+    known = float("nan") if model is None else float(model.places_ppm[index])
+    return known if np.isfinite(known) else plan.all[index].centre
 
 
 def _width_ppm(spectrum: Spectrum, calibration: Calibration) -> float:

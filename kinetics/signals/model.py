@@ -23,7 +23,7 @@ class Signal:
     couplings
         (n, J): n equivalent neighbours with the coupling constant J in Hz, for n + 1 lines each.
     method
-        ``"sum"``.
+        ``"sum"``, or ``"multiplet"``: the line shape is fitted, with overlapping neighbours.
     follow
         Whether the window follows the signal's own drift against the reference.
     exchanging

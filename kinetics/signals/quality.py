@@ -1,11 +1,15 @@
 """What is remarked on in a spectrum, with every threshold and its reason in one place."""
 
+from collections.abc import Sequence
+from itertools import combinations
+
 import numpy as np
 
 from kinetics.remarks import Remark
 from kinetics.signals.calibration import Calibration
 from kinetics.signals.integrals import coverage, standard_errors
 from kinetics.signals.model import FollowPlan, Integrals
+from kinetics.signals.multiplet import MultipletFit
 from kinetics.spectra.model import Spectrum
 
 # An integral ratio good to 1 % wants S/N 150 to 250 of the reference line (memory: Malz & Jancke
@@ -20,6 +24,12 @@ PHASE_DISAGREEMENT_DEG = 8.0
 MOVED_PPM = 0.1
 # A negative integral beyond noise means phase or baseline, never chemistry.
 NEGATIVE_SIGMA = 5.0
+# A fit of overlapping signals leaves 0.1–0.5 % of the variance under bad shim; a missing line or
+# a wrong coupling leaves several per cent. Both must hold: at poor S/N noise alone leaves much.
+PATTERN_UNEXPLAINED = 0.01
+PATTERN_EXCESS = 3.0
+# A twentieth of a window holds but tails; from a fifth on a line of one may lie in both.
+OVERLAP_SEEN, OVERLAP_DOUBTFUL = 0.05, 0.2
 
 
 def remarks_on(
@@ -27,6 +37,7 @@ def remarks_on(
     integrals: Integrals,
     plan: FollowPlan,
     calibration: Calibration,
+    fits: Sequence[MultipletFit] = (),
 ) -> tuple[Remark, ...]:
     """Return what is to be remarked on in one measured spectrum.
 
@@ -36,10 +47,14 @@ def remarks_on(
         The spectrum and what was measured in it.
     plan, calibration
         Of the run.
+    fits
+        Of overlapping signals.
     """
     out: list[Remark] = list(spectrum.remarks)
     out += _reference(spectrum, integrals, plan, calibration)
     out += _phase(spectrum, plan)
+    out += _fits(fits, plan)
+    out += _overlaps(fits, plan)
     errors = standard_errors(integrals)
     offset = 0 if plan.reference is None else 1
     biggest = float(np.max(np.abs(integrals.values))) if integrals.values.size else 0.0
@@ -72,6 +87,52 @@ def remarks_on(
                 )
             )
     return tuple(out)
+
+
+def _fits(fits: Sequence[MultipletFit], plan: FollowPlan) -> list[Remark]:
+    out = []
+    for fit in fits:
+        names = " and ".join(dict.fromkeys(plan.all[i].species for i in fit.members))
+        unexplained = 1.0 - fit.explained
+        if fit.excess > PATTERN_EXCESS and unexplained > PATTERN_UNEXPLAINED:
+            out.append(
+                Remark(
+                    "pattern-mismatch",
+                    f"The n + 1 patterns stated for {names} explain "
+                    f"{100 * fit.explained:.1f} % of the variance in their windows, and what is "
+                    f"left is {fit.excess:.0f} times the noise.",
+                    "The areas may be off by several per cent.",
+                    "Check the couplings in the sheet; protons that couple with each other and "
+                    "stand close do not follow n + 1 (strong coupling), and another signal may "
+                    "lie under them.",
+                    doubtful=True,
+                    subject=names,
+                )
+            )
+    return out
+
+
+def _overlaps(fits: Sequence[MultipletFit], plan: FollowPlan) -> list[Remark]:
+    """Summed windows that share a part of the spectrum."""
+    fitted = {index for fit in fits for index in fit.members}
+    summed = [s for i, s in enumerate(plan.all) if i not in fitted]
+    out = []
+    for a, b in combinations(summed, 2):
+        shared = min(a.window[1], b.window[1]) - max(a.window[0], b.window[0])
+        part = shared / min(a.width, b.width)
+        if part > OVERLAP_SEEN:
+            out.append(
+                Remark(
+                    "windows-overlap",
+                    f"The windows of {a.species} and {b.species} share {shared:.3f} ppm, "
+                    f"{100 * part:.0f} % of the narrower one.",
+                    "What lies there counts for both.",
+                    'Narrow the windows, or give both method = "multiplet".',
+                    doubtful=part > OVERLAP_DOUBTFUL,
+                    subject=f"{a.species} and {b.species}",
+                )
+            )
+    return out
 
 
 def _reference(
