@@ -70,7 +70,7 @@ def test_trouble_of_every_kind_between_good_spectra(trouble: Path) -> None:
     for kind in kinds:
         items += [(trouble, named(kind)), good]
     begun = time.monotonic()
-    with ReadingWorker(processor_s=0.5) as border:
+    with ReadingWorker(processor_s=3.0) as border:  # enough to fill the memory allowed
         outcomes = list(border.read_all(items))
     assert time.monotonic() - begun < 60
     for outcome in outcomes[::2]:
