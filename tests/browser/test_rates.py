@@ -12,10 +12,10 @@ from tests.browser.conftest import Dashboard
 pytestmark = pytest.mark.browser
 
 
-def test_selected_spectra_are_set_aside_and_brought_back(
+def test_selected_spectra_are_set_aside(
     dashboard: Callable[..., Dashboard], page: Page, night: Path
 ) -> None:
-    """Drag over residuals, give name and reason: the record holds it; then bring them back."""
+    """Drag over residuals, give name and reason: the record holds it."""
     logbook = night / "night.logbook"
     before = load_run(logbook)
     running = dashboard(str(night))
@@ -47,12 +47,3 @@ def test_selected_spectra_are_set_aside_and_brought_back(
     assert {d.who for d in after.decisions if d.kind == "set-aside"} == {"R. Vance"}
     assert after.fitted.size == before.fitted.size - count
     assert page.locator("img[src=x]").count() == 0  # the reason is shown as text
-
-    page.get_by_label("Spectra to bring back").click()
-    page.get_by_role("option").first.click()
-    page.keyboard.press("Escape")
-    page.get_by_label("Reason").last.fill("it was the shim, not a bubble")
-    page.get_by_label("Reason").last.press("Tab")
-    page.get_by_role("button", name="Bring back").click()
-    expect(page.get_by_text("1 brought back by R. Vance")).to_be_visible(timeout=30_000)
-    assert len(load_run(logbook).aside) == count - 1
