@@ -2,7 +2,7 @@
 
 import streamlit as st
 
-from dashboard.pages import now, runs
+from dashboard.pages import now, rates, report, runs
 
 
 def main() -> None:
@@ -11,5 +11,7 @@ def main() -> None:
     pages = [
         st.Page(runs.page, title="Runs", url_path="runs", default=True),
         st.Page(now.page, title="Now", url_path="now"),
+        st.Page(rates.page, title="Rates", url_path="rates"),
+        st.Page(report.page, title="Report", url_path="report"),
     ]
     st.navigation(pages, position="top").run()

@@ -38,7 +38,29 @@ def live_chart(
     keep
         Zoom is kept while this stays the same.
     """
-    result = _component()(
+    result = _mounted(figure, key, words, height, keep)
+    found = cast(list[float] | None, getattr(result, "range", None))
+    return None if not found else (float(found[0]), float(found[1]))
+
+
+def selecting_chart(
+    figure: go.Figure, *, key: str, words: str, height: int, keep: str = "same"
+) -> list[str] | None:
+    """Draw a figure whose points can be selected by dragging; otherwise as `live_chart`.
+
+    Returns
+    -------
+    list of str or None
+        `customdata` of the selected points, each once; None while nobody has selected.
+    """
+    figure.update_layout(dragmode="select")
+    result = _mounted(figure, key, words, height, keep)
+    found = cast(list[str] | None, getattr(result, "selected", None))
+    return None if found is None else [str(name) for name in found]
+
+
+def _mounted(figure: go.Figure, key: str, words: str, height: int, keep: str) -> Any:
+    return _component()(
         key=key,
         data={
             "figure": figure.to_json(engine="orjson"),
@@ -47,9 +69,8 @@ def live_chart(
             "keep": keep,
         },
         on_range_change=lambda: None,
+        on_selected_change=lambda: None,
     )
-    found = cast(list[float] | None, getattr(result, "range", None))
-    return None if not found else (float(found[0]), float(found[1]))
 
 
 def dressed(figure: go.Figure, look: Look, *, x_title: str, y_title: str) -> go.Figure:

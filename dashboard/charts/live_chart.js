@@ -47,6 +47,12 @@ export default function (component) {
         if (low !== undefined) setStateValue("range", [low, high]);
         else if (change["xaxis.autorange"]) setStateValue("range", null);
       });
+      box.on("plotly_selected", (event) => {
+        if (!event || !event.points) return;
+        const names = new Set(event.points.map((p) => p.customdata).filter(Boolean));
+        setStateValue("selected", [...names]);
+      });
+      box.on("plotly_deselect", () => setStateValue("selected", []));
     });
   }).catch((error) => { box.textContent = String(error.message || error); });
   return () => {};

@@ -1,5 +1,6 @@
 """A real Chromium, and the real dashboard as a process of its own."""
 
+import shutil
 import signal
 import subprocess
 import sys
@@ -11,6 +12,8 @@ from urllib.request import urlopen
 
 import pytest
 from playwright.sync_api import Browser, Page
+
+from tests.command import kinetics
 
 ROOT = Path(__file__).resolve().parents[2]
 
@@ -50,6 +53,30 @@ def dashboard() -> Iterator[Callable[..., Dashboard]]:
         assert process.wait(timeout=30) == 0
         assert process.stdout is not None
         process.stdout.close()
+
+
+@pytest.fixture(scope="session")
+def measured_night(tmp_path_factory: pytest.TempPathFactory) -> Path:
+    """A folder with the logbook of the finished demonstration night, measured once."""
+    home = tmp_path_factory.mktemp("night")
+    finished = ROOT / "demo_runs" / "finished"
+    done = kinetics(
+        "watch",
+        finished / "run",
+        "--sheet",
+        finished / "finished.toml",
+        "--logbook",
+        home / "night.logbook",
+        "--once",
+    )
+    assert done.returncode == 0, done.stderr
+    return home
+
+
+@pytest.fixture
+def night(measured_night: Path, tmp_path: Path) -> Path:
+    """A copy of it that a test may decide in."""
+    return Path(shutil.copytree(measured_night, tmp_path / "books"))
 
 
 @pytest.fixture
