@@ -25,6 +25,7 @@ from kinetics.signals.amounts import concentrations
 from kinetics.signals.model import Concentrations
 from kinetics.spectra.clock import ClockSettings, Timeline, timeline
 from kinetics.spectra.model import Float64, Stamp
+from kinetics.unassigned import unassigned_remarks
 from kinetics.version import __version__
 
 STATES = ("measured", "doubtful", "set-aside", "unreadable")
@@ -228,9 +229,16 @@ class Run:
         """The law a person chose; None for the automatic choice."""
         return chosen_law(self.decisions)
 
+    @cached_property
+    def unassigned(self) -> tuple[Remark, ...]:
+        """Remarks on lines outside all windows that grow or fade."""
+        rows = self.measured
+        seen = tuple(self.entries[i] for i in rows)
+        return unassigned_remarks(self.logbook, seen, self.time_s[rows], self.sheet)
+
     def remarks(self) -> tuple[Remark, ...]:
-        """Return what concerns the run as a whole: the clock, the receiver."""
-        out = list(self.timeline.remarks)
+        """Return what concerns the run as a whole: the clock, the receiver, unnamed lines."""
+        out = [*self.timeline.remarks, *self.unassigned]
         if self.sheet.reference.kind == "none":
             out.append(
                 Remark(
