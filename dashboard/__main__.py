@@ -114,6 +114,8 @@ def _start_server(home: Path, logbooks: Path, port: int) -> subprocess.Popen[byt
     (settings / "config.toml").write_text(text, encoding="utf-8")
     (home / "app.py").write_text(_STAGE_APP, encoding="utf-8")
     environment = {**os.environ, "KETTLEWATCH_LOGBOOKS": str(logbooks.resolve())}
+    environment.setdefault("OPENBLAS_NUM_THREADS", "1")  # as in kinetics/__main__.py
+    environment.setdefault("OMP_NUM_THREADS", "1")
     root = str(Path(__file__).resolve().parent.parent)
     environment["PYTHONPATH"] = os.pathsep.join(
         part for part in (root, os.environ.get("PYTHONPATH", "")) if part

@@ -45,7 +45,6 @@ NOT_BUILT: dict[str, str] = {
     "temperature": "a temperature log (use temperature_c until then)",
     "reference.t1_s": "the correction for saturation",
     "signals.t1_s": "the correction for saturation",
-    "signals.method=multiplet": "the joint fit of overlapping signals",
 }
 
 

@@ -4,6 +4,10 @@ import os
 import shutil
 from collections.abc import Iterator
 
+# As in kinetics/__main__.py: threads of small matrices only wait for each other.
+os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
+os.environ.setdefault("OMP_NUM_THREADS", "1")
+
 import pytest
 from playwright.sync_api import Browser, sync_playwright
 

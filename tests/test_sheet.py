@@ -78,10 +78,6 @@ def test_all_mistakes_at_once() -> None:
         ("[notify]\nevents = []\n", "notify"),
         ('[temperature]\nlog = "bath.csv"\n', "temperature"),
         ("[[signals]]\nspecies = 'b'\nwindow = [1, 2]\nprotons = 1\nt1_s = 2\n", "signals.t1_s"),
-        (
-            "[[signals]]\nspecies = 'b'\nwindow = [1, 2]\nprotons = 1\nmethod = 'multiplet'\n",
-            "signals.method",
-        ),
     ],
 )
 def test_a_key_without_effect_is_refused_never_ignored(addition: str, key: str) -> None:
@@ -91,9 +87,10 @@ def test_a_key_without_effect_is_refused_never_ignored(addition: str, key: str) 
     assert any(path.startswith(key) for path in NOT_BUILT)
 
 
-def test_method_sum_may_be_written() -> None:
-    sheet = parse_sheet(SMALLEST.replace("protons = 1", "protons = 1\nmethod = 'sum'"), "x")
-    assert sheet.signals[0].method == "sum"
+@pytest.mark.parametrize("method", ["sum", "multiplet"])
+def test_methods(method: str) -> None:
+    sheet = parse_sheet(SMALLEST.replace("protons = 1", f"protons = 1\nmethod = '{method}'"), "x")
+    assert sheet.signals[0].method == method
 
 
 @pytest.mark.parametrize(

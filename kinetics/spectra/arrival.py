@@ -18,10 +18,13 @@ from pathlib import Path
 from typing import Protocol
 
 from kinetics.spectra.readers import completeness, sniff
+from kinetics.spectra.readers.common import EMPTY_END, MOST_BYTES
 
 # A spectrum found complete is looked into again only when its folder entry changes, and in any
 # case at every so many looks: a file rewritten in place does not touch its folder.
 FULL_LOOK_EVERY = 30
+# Data whose end is still zero are taken as they are after so many looks without change.
+EMPTY_END_LOOKS = 60
 _DEEPEST = 2
 
 
@@ -58,8 +61,11 @@ class Source:
         return ";".join(f"{f.name}:{f.size}:{f.mtime_ns}" for f in self.files)
 
     def fallback_hash(self, root: Path) -> str:
-        """Return the SHA-256 of the files' bytes, or of the signature where they cannot be read."""
+        """Return the SHA-256 of the files' bytes, or of the signature where those
+        cannot be read or are far too many."""
         digest = hashlib.sha256()
+        if sum(fact.size for fact in self.files) > MOST_BYTES:
+            return hashlib.sha256(self.signature.encode()).hexdigest()
         try:
             for fact in self.files:
                 digest.update((root / fact.name).read_bytes())
@@ -69,14 +75,14 @@ class Source:
 
     @staticmethod
     def named(root: Path, name: str) -> "Source":
-        """Describe the source of a given name as it lies there now.
+        """Describe the source of a given name (or of one of its rows) as it lies there now.
 
         Raises
         ------
         OSError
             If it has gone.
         """
-        found = _source_at(root, name, OsLayer())
+        found = _source_at(root, re.sub(r"#\d+$", "", name), OsLayer())
         if found is None:
             raise FileNotFoundError(f"{name} is no longer a spectrum")
         return found
@@ -84,10 +90,12 @@ class Source:
 
 @dataclass(frozen=True, slots=True)
 class LookMemory:
-    """What one look leaves for the next: signatures seen, what was settled, how many looks."""
+    """What one look leaves for the next: signatures seen, what was settled, how often the
+    end of the data was found empty, how many looks."""
 
     seen: Mapping[str, str] = field(default_factory=dict)
     settled: Mapping[str, tuple[int, Source]] = field(default_factory=dict)
+    empty_ends: Mapping[str, int] = field(default_factory=dict)
     looks: int = 0
 
 
@@ -209,6 +217,7 @@ def look(
     quick = before.looks % FULL_LOOK_EVERY != 0
     seen: dict[str, str] = {}
     settled: dict[str, tuple[int, Source]] = {}
+    empty_ends: dict[str, int] = {}
     complete: list[Source] = []
     waiting: list[tuple[str, str]] = []
     trouble: list[str] = []
@@ -229,13 +238,18 @@ def look(
         if source is None:
             continue
         seen[name] = source.signature
+        if missing == EMPTY_END and before.seen.get(name) == source.signature:
+            empty_ends[name] = before.empty_ends.get(name, 0) + 1
+            if empty_ends[name] >= EMPTY_END_LOOKS:
+                missing = None  # zeros are all that will come; reading will remark on them
         if missing:
             waiting.append((name, missing))
         elif before.seen.get(name) != source.signature:
             waiting.append((name, "still changing, or seen for the first time"))
         else:
             complete.append(source)
-            settled[name] = (entry.mtime_ns, source)
+            if source.kind != "raw series":  # grows without touching its folder
+                settled[name] = (entry.mtime_ns, source)
     complete.sort(key=lambda s: natural_key(s.name))
     waiting.sort(key=lambda w: natural_key(w[0]))
     if trouble and not complete and not waiting:
@@ -245,7 +259,7 @@ def look(
         tuple(complete),
         tuple(waiting),
         "; ".join(trouble),
-        LookMemory(seen, settled, before.looks + 1),
+        LookMemory(seen, settled, empty_ends, before.looks + 1),
     )
 
 
@@ -275,7 +289,7 @@ def _candidates(
 
 
 # One of these in a folder makes it a raw instrument folder.
-RAW_FOLDER_MARKS = frozenset({"acqus", "fid", "ser", "procpar"})
+RAW_FOLDER_MARKS = frozenset({"acqus", "fid", "ser", "procpar", "procs"})
 
 
 def _source_at(root: Path, name: str, files: FileLayer) -> Source | None:
@@ -289,16 +303,49 @@ def _source_at(root: Path, name: str, files: FileLayer) -> Source | None:
 def _source_of(root: Path, name: str, entry: DirectoryEntry, files: FileLayer) -> Source | None:
     """Recognise a candidate by its content; None if it is no spectrum."""
     if entry.is_dir:
-        inside = {e.name: e for e in files.listing(root / name) if not e.is_dir}
-        if not {"acqus", "fid"} & set(inside):
-            return None
-        facts = tuple(
-            FileFact(f"{name}/{part}", inside[part].size, inside[part].mtime_ns)
-            for part in ("acqus", "fid")
-            if part in inside
-        )
-        return Source(name, "raw folder", facts)
+        return _folder_source(root, name, files)
     kind = sniff(name, entry.size, files.head(root / name, 4096))
     if kind is None:
         return None
     return Source(name, kind, (FileFact(name, entry.size, entry.mtime_ns),))
+
+
+def _folder_source(root: Path, name: str, files: FileLayer) -> Source | None:
+    """Recognise a raw instrument folder by the files in it; a raw FID comes before its spectrum."""
+    entries = files.listing(root / name)
+    inside = {e.name: e for e in entries if not e.is_dir}
+    folders = {e.name for e in entries if e.is_dir}
+
+    def source(kind: str, *parts: str) -> Source:
+        facts = [
+            FileFact(f"{name}/{part}", inside[part].size, inside[part].mtime_ns)
+            for part in parts
+            if part in inside
+        ]
+        return Source(name, kind, tuple(facts))
+
+    if "procpar" in inside:
+        if "fid" not in inside and "datdir" in folders:
+            below = {f"datdir/{e.name}": e for e in files.listing(root / name / "datdir")}
+            inside.update(below)
+        return source("procpar folder", "procpar", "fid" if "fid" in inside else "datdir/phasefile")
+    if "ser" in inside:
+        return source("raw series", "acqus", "acqu2s", "ser")
+    if "fid" in inside:
+        return source("raw folder", "acqus", "fid")
+    if {"procs", "1r"} <= set(inside):
+        return source("processed folder", "acqus", "procs", "1r")
+    if "pdata" in folders:
+        for number in sorted(
+            files.listing(root / name / "pdata"), key=lambda e: natural_key(e.name)
+        ):
+            if not number.is_dir:
+                continue
+            prefix = f"pdata/{number.name}"
+            below = {
+                f"{prefix}/{e.name}": e for e in files.listing(root / name / prefix) if not e.is_dir
+            }
+            if {f"{prefix}/procs", f"{prefix}/1r"} <= set(below):
+                inside.update(below)
+                return source("processed folder", "acqus", f"{prefix}/procs", f"{prefix}/1r")
+    return source("raw folder", "acqus") if "acqus" in inside else None

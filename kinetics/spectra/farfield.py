@@ -13,6 +13,7 @@ from dataclasses import dataclass
 
 import numpy as np
 import numpy.typing as npt
+from scipy.linalg import solve_triangular
 
 from kinetics.spectra.model import Axis, Complex64, Float64
 
@@ -138,17 +139,22 @@ def _solved(
     scale = np.linalg.norm(design, axis=0)
     design = design / scale
     weight = np.ones(ppm.size)
-    solution = np.zeros(design.shape[1], complex)
+    parts = np.stack([means.real, means.imag], axis=1)
     spread = 0.0
+    triangle = np.eye(design.shape[1])
     for _ in range(8):  # robust: small lines nobody found stand in some of the blocks
-        weighted = design * weight[:, None]
-        solution = np.linalg.lstsq(weighted, means * weight, rcond=None)[0]
-        rest = np.abs(means - design @ solution)
+        # The design is real: one real decomposition serves both parts.
+        orthogonal, triangle = np.linalg.qr(design * weight[:, None])
+        both = solve_triangular(
+            triangle, orthogonal.T @ (parts * weight[:, None]), check_finite=False
+        )
+        rest = np.hypot(*(parts - design @ both).T)
         spread = 1.4826 * float(np.median(rest)) + 1e-30
         weight = 1.0 / np.sqrt(1.0 + (rest / (2.0 * spread)) ** 2)
-    weighted = design * weight[:, None]
+    solution = both[:, 0] + 1j * both[:, 1]
+    inverse_triangle = solve_triangular(triangle, np.eye(triangle.shape[0]), check_finite=False)
     # Rayleigh: the median of |z| is 1.177 sd of either part.
-    variance = (spread / 1.4826 / 1.177) ** 2 * np.diag(np.linalg.pinv(weighted.T @ weighted))
+    variance = (spread / 1.4826 / 1.177) ** 2 * np.sum(inverse_triangle**2, axis=1)
     first = solution[: strong.size]
     # A·e^{iφ}/(i·2π·(ν − ν₀)) is the far field of a line, so i·a has its phase φ.
     correction = -np.rad2deg(np.angle(1j * first))

@@ -106,13 +106,24 @@ def transform(raw: Raw, *, broadening_hz: float, zero_fill: int) -> ComplexSpect
     )
 
 
+@lru_cache(maxsize=8)
 def pivot_scale(size: int) -> Float32:
     """Return x from −½ (point 0) to +½: first-order phase turns about the centre."""
-    return ((np.arange(size) + 0.5) / size - 0.5).astype(np.float32)
+    scale = ((np.arange(size) + 0.5) / size - 0.5).astype(np.float32)
+    scale.flags.writeable = False
+    return scale
 
 
-def rotate(values: Complex64, p0_deg: float, p1_deg: float) -> Float32:
-    """Return the real part of `values` after phase correction.
+@lru_cache(maxsize=8)
+def _ramp(size: int, p1_deg: float) -> Complex64:
+    """First-order rotation; all spectra of a run share it."""
+    ramp = np.asarray(np.exp(1j * np.deg2rad(p1_deg) * pivot_scale(size)), np.complex64)
+    ramp.flags.writeable = False
+    return ramp
+
+
+def rotated(values: Complex64, p0_deg: float, p1_deg: float) -> Complex64:
+    """Return complex `values` after phase correction.
 
     Parameters
     ----------
@@ -123,14 +134,12 @@ def rotate(values: Complex64, p0_deg: float, p1_deg: float) -> Float32:
     p1_deg
         First-order phase in degrees over the whole width.
     """
+    turn = np.complex64(np.exp(1j * np.deg2rad(p0_deg)))
     if p1_deg == 0.0:
-        turn = np.complex64(np.exp(1j * np.deg2rad(p0_deg)))
-        return np.asarray(values.real * turn.real - values.imag * turn.imag, np.float32)
-    angle = np.deg2rad(np.float32(p0_deg) + np.float32(p1_deg) * pivot_scale(values.size))
-    return np.asarray(values.real * np.cos(angle) - values.imag * np.sin(angle), np.float32)
+        return np.asarray(values * turn, np.complex64)
+    return np.asarray(values * (_ramp(values.size, p1_deg) * turn), np.complex64)
 
 
-def rotated(values: Complex64, p0_deg: float, p1_deg: float) -> Complex64:
-    """Return complex `values` after phase correction; its real part is what `rotate` returns."""
-    angle = np.deg2rad(np.float32(p0_deg) + np.float32(p1_deg) * pivot_scale(values.size))
-    return np.asarray(values * np.exp(1j * angle), np.complex64)
+def rotate(values: Complex64, p0_deg: float, p1_deg: float) -> Float32:
+    """Return the real part of `rotated`."""
+    return np.ascontiguousarray(rotated(values, p0_deg, p1_deg).real)

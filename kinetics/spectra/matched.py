@@ -9,9 +9,11 @@ neighbours taken up by terms of their own.
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 import numpy.typing as npt
+import scipy.fft
 from scipy.interpolate import CubicSpline
 
 from kinetics.spectra.baseline import Ranges
@@ -33,7 +35,7 @@ _ROUNDS = 3
 _TAPS = np.arange(-2, 4)  # neighbours that a value between points is made of
 
 
-@dataclass(frozen=True, slots=True, eq=False)
+@dataclass(frozen=True, eq=False)
 class GroupShapes:
     """Complex shapes of the groups of lines of a run, phased.
 
@@ -50,6 +52,31 @@ class GroupShapes:
     first_ppm: tuple[float, ...]
     step_ppm: float
     shapes: tuple[Complex64, ...]
+
+    @cached_property
+    def solvers(self) -> "tuple[_Solver, ...]":
+        """What is needed to fit each shape; made once, since it is the same for all spectra."""
+        return tuple(_solver(shape.astype(np.complex128)) for shape in self.shapes)
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class _Solver:
+    """Least squares of one shape, its derivative and a straight line, columns of norm one."""
+
+    shape: Complex128
+    design: Complex128
+    pseudo: Complex128
+    norms: Float64
+    gain: float
+
+
+def _solver(shape: Complex128) -> _Solver:
+    x = np.linspace(-1.0, 1.0, shape.size)
+    design = np.stack([shape, np.gradient(shape), np.ones_like(shape), x.astype(complex)], axis=1)
+    norms = np.linalg.norm(design, axis=0)
+    design = design / norms
+    pseudo = np.linalg.pinv(design)
+    return _Solver(shape, design, pseudo, norms, float(np.sum(np.abs(pseudo[0]) ** 2)))
 
 
 NO_GROUPS = GroupShapes((), -1.0, ())
@@ -130,12 +157,13 @@ def matched_phases(
         The correction that was applied; answers are corrections of the spectrum before it.
     """
     found: list[tuple[float, float, float]] = []
-    for first, shape in zip(shapes.first_ppm, shapes.shapes, strict=True):
+    for first, solver in zip(shapes.first_ppm, shapes.solvers, strict=True):
+        shape = solver.shape
         ppm = np.asarray(first + shapes.step_ppm * np.arange(shape.size), np.float64)
         place = axis.position(float(ppm[shape.size // 2]))
         if not shape.size < place < axis.size - shape.size:
             continue
-        answer = _matched(values, axis, shape.astype(np.complex128), ppm)
+        answer = _matched(values, axis, solver, ppm)
         if answer is not None:
             where = (place + 0.5) / axis.size - 0.5
             correction = p0_deg + p1_deg * where - answer[0]
@@ -145,14 +173,10 @@ def matched_phases(
 
 
 def _matched(
-    values: Complex64, axis: Axis, shape: Complex128, ppm: Float64
+    values: Complex64, axis: Axis, solver: _Solver, ppm: Float64
 ) -> tuple[float, float] | None:
     """Phase (degrees) of the spectrum against one shape, and its standard error."""
-    x = np.linspace(-1.0, 1.0, shape.size)
-    design = np.stack([shape, np.gradient(shape), np.ones_like(shape), x.astype(complex)], axis=1)
-    scale = np.linalg.norm(design, axis=0)
-    pseudo = np.linalg.pinv(design / scale)
-    gain = float(np.sum(np.abs(pseudo[0]) ** 2))
+    shape, pseudo, scale = solver.shape, solver.pseudo, solver.norms
     shift = _start(values, axis, shape, ppm)
     for round_ in range(_ROUNDS):
         seen = _at(values, axis, ppm + shift)
@@ -162,14 +186,14 @@ def _matched(
             shift -= float(np.clip(points, -3.0, 3.0)) * axis.step_ppm
             if abs(shift) > _FARTHEST_PPM:
                 return None
-    rest = seen - (design / scale) @ solution
+    rest = seen - solver.design @ solution
     left = float(np.sqrt(np.mean(np.abs(rest) ** 2)))
     line = float(np.abs(solution[0]))
     if left * np.sqrt(shape.size) > _MISFIT * line or line == 0.0:
         return None
     # Neighbouring points are alike: about as many are independent as a line has points apart.
     alike = max(_alike(rest), 1.0)
-    noise = np.sqrt(0.5 * gain * alike) * left / line
+    noise = np.sqrt(0.5 * solver.gain * alike) * left / line
     # A worse shim is seldom symmetric, and lop-sided lines look like dispersion. The imaginary
     # part of the derivative's share is how much broader (points) the lines have become.
     broader = abs(float((solution[1] / solution[0]).imag)) * _LOPSIDED
@@ -198,9 +222,12 @@ def _alike(rest: Complex128) -> float:
     if total == 0.0:
         return 1.0
     out = 1.0
-    for lag in range(1, min(rest.size // 4, 32)):
-        part = float(np.sum(rest[lag:] * rest[:-lag].conj()).real) / total
+    # All lags at once: the autocorrelation is the transform of the power spectrum.
+    size = scipy.fft.next_fast_len(rest.size + 32)
+    spectrum = np.asarray(scipy.fft.fft(rest, size))
+    lags = np.asarray(scipy.fft.ifft(np.abs(spectrum) ** 2))[: min(rest.size // 4, 32)].real / total
+    for part in lags[1:]:
         if part <= 0.05:
             break
-        out += 2.0 * part
+        out += 2.0 * float(part)
     return out

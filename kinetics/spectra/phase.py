@@ -12,6 +12,7 @@ is found each time.
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from functools import lru_cache
 
 import numpy as np
 import numpy.typing as npt
@@ -120,9 +121,7 @@ def _near(
     size = filled_size(points, 2)
     rotated = int(np.floor(raw.group_delay + 1e-9))
     fraction = raw.group_delay - rotated
-    time = np.arange(points - rotated) / raw.spectral_width_hz
-    width_hz = max(1.0, _END_OF_WEIGHT / (np.pi * time[-1]))
-    weight = (time * np.exp(-np.pi * width_hz * time)).astype(np.float32)
+    weight, width_hz = _weight(points - rotated, raw.spectral_width_hz)
     fid = np.zeros(size, np.complex64)
     fid[: points - rotated] = raw.data[rotated:] * weight
     values = scipy.fft.fftshift(scipy.fft.fft(fid, overwrite_x=True))[::-1]
@@ -136,6 +135,16 @@ def _near(
         height[max(int(start * scale), 0) : max(int(np.ceil(stop * scale)), 0)] = 0.0
     phases, heights = _at_lines(values, height, where, width_hz / raw.spectral_width_hz * size)
     return phases, heights, width_hz
+
+
+@lru_cache(maxsize=8)
+def _weight(points: int, spectral_width_hz: float) -> tuple[Float32, float]:
+    """t·exp(−πwt) and w in Hz."""
+    time = np.arange(points) / spectral_width_hz
+    width_hz = max(1.0, _END_OF_WEIGHT / (np.pi * time[-1]))
+    weight = (time * np.exp(-np.pi * width_hz * time)).astype(np.float32)
+    weight.flags.writeable = False
+    return weight, float(width_hz)
 
 
 def _at_lines(

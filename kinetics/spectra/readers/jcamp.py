@@ -19,13 +19,19 @@ from kinetics.errors import NotYetError, UnreadableError
 from kinetics.remarks import Remark
 from kinetics.spectra.model import Axis, Float64, Raw, Stamp
 from kinetics.spectra.readers.asdf import decode
-from kinetics.spectra.readers.raw_folder import clipped
+from kinetics.spectra.readers.common import (
+    MOST_BYTES,
+    carrier_unknown,
+    checked_finite,
+    checked_nucleus,
+    checked_points,
+    checked_scale,
+    clipped,
+)
 
 if TYPE_CHECKING:
     from kinetics.spectra.arrival import FileLayer, Source
 
-_MOST_BYTES = 512 << 20
-_MOST_POINTS = 1 << 24
 _COLUMNS: tuple[str, ...] = ("SYMBOL", "VARDIM", "FACTOR", "FIRST", "LAST", "UNITS")
 _LABEL = re.compile(rb"^##([^=\r\n]*)=", re.M)
 
@@ -54,7 +60,7 @@ def completeness(root: Path, source: Source, files: FileLayer) -> str | None:
 def read(root: Path, source: Source) -> tuple[Raw, ...]:
     """Read the first block that holds NMR data."""
     path = root / source.name
-    if path.stat().st_size > _MOST_BYTES:
+    if path.stat().st_size > MOST_BYTES:
         raise UnreadableError("the file is far too large for one spectrum")
     content = path.read_bytes()
     if not re.search(rb"##END\s*=[^\n]*\s*\Z", content.rstrip(b"\x00 \r\n\t") + b"\n"):
@@ -138,9 +144,9 @@ def _number(block: dict[str, Record], label: str) -> float | None:
 
 
 def _points(declared: float | None) -> int:
-    if declared is None or not 2 <= declared <= _MOST_POINTS:
+    if declared is None or not np.isfinite(declared):
         raise UnreadableError("the declared number of points makes no sense")
-    return int(declared)
+    return checked_points(int(declared))
 
 
 def _xydata(block: dict[str, Record], is_fid: bool) -> Table:
@@ -206,16 +212,16 @@ def _same_count(found: int, declared: int) -> None:
 def _raw(
     source: Source, facts: dict[str, str], table: Table, sha256: str, modified: datetime
 ) -> Raw:
-    nucleus = facts.get(".OBSERVENUCLEUS", "").replace("^", "").strip()
-    if nucleus and nucleus.upper() not in ("1H", "H1", "H"):
-        raise UnreadableError(f"the spectrum is of {nucleus}, not of 1H")
+    nucleus = checked_nucleus(facts.get(".OBSERVENUCLEUS", ""))
     observe = _fact(facts, ".OBSERVEFREQUENCY") or _fact(facts, "$SFO1")
     base = _fact(facts, "$BF1") or observe
     if base is None or observe is None:
         raise UnreadableError("the file does not say the spectrometer frequency")
+    checked_scale(base_frequency=base, spectrometer_frequency=observe)
     remarks: list[Remark] = []
     axis, width, carrier = None, 0.0, 0.0
     values = table.real if table.imaginary is None else table.real + 1j * table.imaginary
+    checked_finite(values)
     if table.is_fid:
         span = abs(table.last - table.first)
         if not span > 0:
@@ -223,14 +229,7 @@ def _raw(
         width = _fact(facts, "$SWH") or (table.real.size - 1) / span
         carrier, known = _carrier(facts, base, observe)
         if not known:
-            remarks.append(
-                Remark(
-                    "carrier-unknown",
-                    "The file does not say which shift the centre of the spectrum has.",
-                    "0 ppm was taken; the shift reference then puts the axis right.",
-                    "Give [shift_reference] a window as the uncorrected axis shows it.",
-                )
-            )
+            remarks.append(carrier_unknown())
         remarks.extend(clipped(values))
     else:
         axis, values = _axis(table, facts, base, values)

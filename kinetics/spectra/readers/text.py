@@ -20,11 +20,11 @@ import numpy as np
 from kinetics.errors import UnreadableError
 from kinetics.remarks import Remark
 from kinetics.spectra.model import Axis, Float64, Raw, Stamp
+from kinetics.spectra.readers.common import MOST_BYTES, checked_points
 
 if TYPE_CHECKING:
     from kinetics.spectra.arrival import FileLayer, Source
 
-_MOST_BYTES = 512 << 20
 _COMMENT = re.compile(r"^[#%!]\s*([A-Za-z_]+)\s*[=:]\s*(.*?)\s*$", re.M)
 _HEADER_LINES = 200
 # Spacing of the ppm column may differ by rounding, as part of a step.
@@ -43,7 +43,7 @@ def completeness(root: Path, source: Source, files: FileLayer) -> str | None:
 def read(root: Path, source: Source) -> tuple[Raw, ...]:
     """Read the table as one spectrum."""
     path = root / source.name
-    if path.stat().st_size > _MOST_BYTES:
+    if path.stat().st_size > MOST_BYTES:
         raise UnreadableError("the file is far too large for one spectrum")
     content = path.read_bytes()
     try:
@@ -129,8 +129,7 @@ def _columns(text: str) -> tuple[Float64, Float64]:
         raise UnreadableError(f"the table is not two columns of numbers ({why})") from None
     if rows.shape[1] < 2:
         raise UnreadableError("the table has one column; expected ppm and intensity")
-    if rows.shape[0] < 64:
-        raise UnreadableError(f"the table has only {rows.shape[0]} points")
+    checked_points(rows.shape[0])
     return rows[:, 0], rows[:, 1]
 
 
