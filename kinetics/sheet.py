@@ -43,8 +43,6 @@ LAWS: tuple[str, ...] = get_args(LawName)
 NOT_BUILT: dict[str, str] = {
     "notify": "telling someone about events",
     "temperature": "a temperature log (use temperature_c until then)",
-    "reference.t1_s": "the correction for saturation",
-    "signals.t1_s": "the correction for saturation",
 }
 
 
