@@ -23,7 +23,8 @@ _SIGMA = 5.5
 _FLOOR_CELLS = 101
 # Shim and phase move the flanks of a strong line; a change below this part of it is no line.
 _FLANK, _FLANK_PPM = 0.03, 0.05
-_MOVED_PPM = 0.05  # what grows here while it fades as much as close by has only moved
+# What grows here while something fades close by has only moved (water, as acid is set free).
+_MOVED_PPM, _SAME_PPM = 0.25, 0.05
 # 13C satellites stand 57–105 Hz from their line and have 0.55 % of it each (common practice:
 # one-bond couplings of 115 to 210 Hz, 1.1 % 13C); narrowness lets them seem somewhat higher.
 _SATELLITE_HZ, _SATELLITE_SHARE = (50.0, 115.0), 0.012
@@ -105,7 +106,7 @@ def unassigned(
     good = free & strong & (np.abs(last) > _FLANK * flank) & (opposite < 0.3 * np.abs(last))
     out: list[Unassigned] = []
     for cell in np.argsort(-np.abs(last)):
-        if not good[cell] or any(abs(ppm[cell] - one.ppm) < _MOVED_PPM for one in out):
+        if not good[cell] or any(abs(ppm[cell] - one.ppm) < _SAME_PPM for one in out):
             continue
         if _satellite(float(ppm[cell]), float(last[cell]), ppm, last, windows, frequency_mhz):
             continue
