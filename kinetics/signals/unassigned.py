@@ -101,7 +101,8 @@ def unassigned(
     last = change[-1]
     flank = maximum_filter1d(np.maximum(means[-1], before), _odd(_FLANK_PPM / step))
     around = _odd(_MOVED_PPM / step)
-    opposite = np.where(last > 0, -minimum_filter1d(last, around), maximum_filter1d(last, around))
+    real = np.where(np.abs(score[-1]) > _SIGMA, last, 0.0)
+    opposite = np.where(last > 0, -minimum_filter1d(real, around), maximum_filter1d(real, around))
     strong = np.abs(score[-1]) > _SIGMA
     good = free & strong & (np.abs(last) > _FLANK * flank) & (opposite < 0.3 * np.abs(last))
     out: list[Unassigned] = []
