@@ -13,6 +13,7 @@ from kinetics.signals.calibration import Calibration
 from kinetics.signals.integrals import fit_multiplets, integrate
 from kinetics.signals.model import FollowPlan, Integrals, Signal
 from kinetics.signals.quality import remarks_on
+from kinetics.signals.saturation import relaxed
 from kinetics.spectra.model import Axis, Float32, ProcessingRecord, Raw, Spectrum
 from kinetics.spectra.processing import Settings, process
 from kinetics.version import __version__
@@ -82,6 +83,7 @@ def follow_plan(sheet: Sheet) -> FollowPlan:
             window=sheet.reference.window,
             protons=sheet.reference.protons,
             follow=False,
+            t1_s=sheet.reference.t1_s,
         )
     signals = tuple(
         Signal(
@@ -92,6 +94,7 @@ def follow_plan(sheet: Sheet) -> FollowPlan:
             method=entry.method,
             follow=entry.follow,
             exchanging=entry.exchanging,
+            t1_s=entry.t1_s,
         )
         for entry in sheet.signals
     )
@@ -159,6 +162,8 @@ def measure(raw: Raw, recipe: Recipe) -> Measurement:
     fits = fit_multiplets(spectrum, plan, calibration)
     integrals = integrate(spectrum, plan, calibration, fits)
     remarks = remarks_on(spectrum, integrals, plan, calibration, fits)
+    integrals, saturated = relaxed(integrals, plan, raw.recycle_s, raw.flip_angle_deg)
+    remarks = (*remarks, *saturated)
     doubtful = any(remark.doubtful for remark in remarks)
     return Measurement(
         state="doubtful" if doubtful else "measured",

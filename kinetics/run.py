@@ -26,6 +26,7 @@ from kinetics.signals.model import Concentrations
 from kinetics.spectra.clock import ClockSettings, Timeline, in_utc, seconds_since, timeline
 from kinetics.spectra.model import Float64, Stamp
 from kinetics.temperature import Logged, join, remarks_on
+from kinetics.unassigned import unassigned_remarks
 from kinetics.version import __version__
 
 STATES = ("measured", "doubtful", "set-aside", "unreadable")
@@ -245,9 +246,16 @@ class Run:
         """The law a person chose; None for the automatic choice."""
         return chosen_law(self.decisions)
 
+    @cached_property
+    def unassigned(self) -> tuple[Remark, ...]:
+        """Remarks on lines outside all windows that grow or fade."""
+        rows = self.measured
+        seen = tuple(self.entries[i] for i in rows)
+        return unassigned_remarks(self.logbook, seen, self.time_s[rows], self.sheet)
+
     def remarks(self) -> tuple[Remark, ...]:
-        """Return what concerns the run as a whole: the clock, the receiver."""
-        out = list(self.timeline.remarks)
+        """Return what concerns the run as a whole: clock, temperature, receiver, unnamed lines."""
+        out = [*self.timeline.remarks, *self.unassigned]
         if self.sheet.temperature is not None:
             out += remarks_on(self._logged, [self.temperatures_k[i] for i in self.measured])
         if self.sheet.reference.kind == "none":

@@ -42,8 +42,6 @@ LAWS: tuple[str, ...] = get_args(LawName)
 # [[signals]] means any of them; "path=value" only that value. Emptied as they are built.
 NOT_BUILT: dict[str, str] = {
     "notify": "telling someone about events",
-    "reference.t1_s": "the correction for saturation",
-    "signals.t1_s": "the correction for saturation",
 }
 
 

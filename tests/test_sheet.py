@@ -76,7 +76,6 @@ def test_all_mistakes_at_once() -> None:
     ("addition", "key"),
     [
         ("[notify]\nevents = []\n", "notify"),
-        ("[[signals]]\nspecies = 'b'\nwindow = [1, 2]\nprotons = 1\nt1_s = 2\n", "signals.t1_s"),
     ],
 )
 def test_a_key_without_effect_is_refused_never_ignored(addition: str, key: str) -> None:

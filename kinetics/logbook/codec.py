@@ -14,7 +14,7 @@ import numpy as np
 from kinetics.remarks import Remark
 from kinetics.signals.calibration import Calibration
 from kinetics.signals.model import Integrals, Signal
-from kinetics.signals.multiplet import LineModel
+from kinetics.signals.multiplet_model import LineModel
 from kinetics.signals.response import Response
 from kinetics.spectra.align import Template
 from kinetics.spectra.matched import GroupShapes

@@ -11,9 +11,9 @@ import numpy as np
 from scipy.interpolate import CubicSpline
 
 from kinetics.errors import UnreadableError
-from kinetics.signals.lineshape import measured_shape
+from kinetics.signals.joint import line_model
 from kinetics.signals.model import FollowPlan, Signal
-from kinetics.signals.multiplet import SEEN, LineModel, fit_group, fitted_groups
+from kinetics.signals.multiplet_model import LineModel
 from kinetics.signals.pattern import SHARE_SD, USUAL_SHARE, fitted_shape, sticks
 from kinetics.signals.response import Response, make_response
 from kinetics.signals.undeclared import undeclared
@@ -150,7 +150,7 @@ def calibrate(raws: Sequence[Raw], plan: FollowPlan, version: int = 1) -> Calibr
         shape_step_ppm=axis.step_ppm,
         response=response,
         others=tuple(other.signal for other in others),
-        model=_line_model(
+        model=line_model(
             plan,
             corrected,
             axis,
@@ -160,39 +160,6 @@ def calibrate(raws: Sequence[Raw], plan: FollowPlan, version: int = 1) -> Calibr
             frequency,
         ),
     )
-
-
-def _line_model(
-    plan: FollowPlan,
-    corrected: Float32,
-    axis: Axis,
-    line: tuple[float, float],
-    sd: float,
-    correlation: Float64,
-    frequency: float,
-) -> LineModel | None:
-    """Shape of the reference line, and where the signals that are fitted together stand."""
-    groups = fitted_groups(plan)
-    if not groups:
-        return None
-    centre, singlet = float("nan"), False
-    if plan.reference is not None:
-        centre, height = _top(corrected, axis, plan.reference)
-        singlet = height > SHAPE_SNR * sd
-    shape = measured_shape(corrected, axis, centre, *line, sd, singlet=singlet)
-    places = np.full(len(plan.all), np.nan)
-    model = LineModel(shape, axis.step_ppm, line[0], places, correlation)
-    found = places.copy()
-    for members in groups:
-        fit = fit_group(corrected, axis, frequency, plan.all, members, model, 0.0, sd)
-        if fit is None:
-            continue
-        for place, index in enumerate(members):
-            low, high = plan.all[index].window
-            error = float(np.sqrt(fit.covariance[place, place]))
-            if fit.areas[place] > SEEN * error and low < fit.shifts_ppm[place] < high:
-                found[index] = fit.shifts_ppm[place]
-    return LineModel(shape, axis.step_ppm, line[0], found, correlation)
 
 
 def _noise_colour(parts: Sequence[Phased]) -> Float64:
@@ -368,7 +335,7 @@ def _exchanging_width(
     place, height = _top(corrected, axis, signal)
     if height < SHAPE_SNR * sd:
         return reference_ppm
-    limit = max(round(0.15 / abs(axis.step_ppm)), 8)
+    limit = max(round(signal.width / abs(axis.step_ppm)), 8)
     line = LinePosition(axis.position(place), height)
     width = width_at_half(corrected, line, limit) * abs(axis.step_ppm)
     return width if np.isfinite(width) else reference_ppm

@@ -28,6 +28,8 @@ class Signal:
         Whether the window follows the signal's own drift against the reference.
     exchanging
         Whether breadth and wandering are to be expected (OH, NH, water).
+    t1_s
+        Longitudinal relaxation time in s, None where it is not known.
     """
 
     species: str
@@ -37,6 +39,7 @@ class Signal:
     method: str = "sum"
     follow: bool = True
     exchanging: bool = False
+    t1_s: float | None = None
 
     @property
     def centre(self) -> float:

@@ -15,13 +15,18 @@ from dataclasses import dataclass
 from itertools import product
 
 import numpy as np
-import numpy.typing as npt
-import scipy.fft
 from scipy.linalg import toeplitz
 
-from kinetics.signals.lineshape import on_step
 from kinetics.signals.model import FollowPlan, Signal
-from kinetics.signals.pattern import sticks
+from kinetics.signals.multiplet_model import (
+    Free,
+    Layout,
+    LineModel,
+    lay_out,
+    linear_columns,
+    nonlinear_slopes,
+    projected,
+)
 from kinetics.spectra.model import Axis, Float32, Float64
 
 # Usual spreads. Shift of a signal seen in the calibration, in reference line-widths; of one not
@@ -71,29 +76,6 @@ class MultipletFit:
     excess: float
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class LineModel:
-    """What fits start from.
-
-    Attributes
-    ----------
-    shape, step_ppm
-        Line shape (see `lineshape.measured_shape`) and its point distance.
-    width_ppm
-        Width at half height of that line.
-    places_ppm
-        Where each signal of the plan stood in the calibration, nan where it was not seen.
-    correlation
-        Autocorrelation of the noise of one point.
-    """
-
-    shape: Float32
-    step_ppm: float
-    width_ppm: float
-    places_ppm: Float64
-    correlation: Float64
-
-
 def fitted_groups(plan: FollowPlan) -> tuple[tuple[int, ...], ...]:
     """Return which signals are fitted together, as places in `plan.all`.
 
@@ -128,33 +110,6 @@ def _overlap(a: Signal, b: Signal) -> bool:
     return min(a.window[1], b.window[1]) >= max(a.window[0], b.window[0]) - 1e-9
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class _Layout:
-    """The points of a range and the factors all models of it share."""
-
-    data: Float64
-    size: int
-    time: Float64
-    line: npt.NDArray[np.complex128]
-    start: int
-    axis: Axis
-    hz_per_point: float
-    spectrum_size: int
-
-
-@dataclass(frozen=True, slots=True)
-class _Free:
-    """Which entries of the parameter vector belong to one signal: shift, width, couplings.
-
-    Entry 0 is the phase, which all share.
-    """
-
-    shift: int
-    width: int
-    couplings: tuple[int, ...]
-    neighbours: tuple[int, ...]
-
-
 def fit_group(
     intensities: Float32,
     axis: Axis,
@@ -187,7 +142,7 @@ def fit_group(
     None where the range lies off the axis or the frequency is not known.
     """
     chosen, correlation = [signals[i] for i in members], lines.correlation
-    layout = _layout(intensities, axis, frequency_mhz, chosen, lines)
+    layout = lay_out(intensities, axis, frequency_mhz, chosen, lines)
     if layout is None:
         return None
     frees, usual, spread = _start(chosen, members, layout, lines, extra_width_ppm)
@@ -199,11 +154,11 @@ def fit_group(
     values = _swept(layout, frees, usual, chosen, members, lines, variance)
     usual = values.copy()
     values, damping = values.copy(), 1e-3
-    linear, rest = _projected(layout, frees, values)
+    linear, rest = projected(layout, frees, values)
     cost = _cost(rest, values, usual, spread, variance)
     for _ in range(_STEPS):
-        slopes = _slopes(layout, frees, values, linear)
-        columns = _columns(layout, frees, values)
+        slopes = nonlinear_slopes(layout, frees, values, linear)
+        columns = linear_columns(layout, frees, values)
         # Project the linear part out of the slopes (Kaufman's form).
         solved, *_ = np.linalg.lstsq(columns, slopes, rcond=None)
         slopes = slopes - columns @ solved
@@ -211,7 +166,7 @@ def fit_group(
         pull = slopes.T @ rest / variance - (values - usual) / spread**2
         step = np.linalg.solve(normal + damping * np.diag(np.diag(normal)), pull)
         tried = _bounded(values + step, frees, lines.width_ppm / abs(axis.step_ppm))
-        new_linear, new_rest = _projected(layout, frees, tried)
+        new_linear, new_rest = projected(layout, frees, tried)
         new_cost = _cost(new_rest, tried, usual, spread, variance)
         if new_cost <= cost:
             gain = cost - new_cost
@@ -223,45 +178,13 @@ def fit_group(
     return _result(layout, frees, values, linear, rest, spread, members, sd, correlation, variance)
 
 
-def _layout(
-    intensities: Float32,
-    axis: Axis,
-    frequency_mhz: float,
-    chosen: Sequence[Signal],
-    lines: LineModel,
-) -> _Layout | None:
-    low = min(s.window[0] for s in chosen)
-    high = max(s.window[1] for s in chosen)
-    first, last = (round(v) for v in axis.span((low, high)))
-    if first < 0 or last >= axis.size or last - first < 16 or lines.shape.size == 0:
-        return None
-    if not np.isfinite(frequency_mhz):
-        return None
-    shape = on_step(lines.shape, lines.step_ppm, axis.step_ppm)
-    data = intensities[first : last + 1].astype(np.float64)
-    size = scipy.fft.next_fast_len(data.size + shape.size, real=True)
-    padded = np.zeros(size)
-    padded[: shape.size] = shape
-    line = scipy.fft.rfft(np.roll(padded, -(shape.size // 2)))
-    return _Layout(
-        data,
-        size,
-        np.asarray(scipy.fft.rfftfreq(size)),
-        np.asarray(line),
-        first,
-        axis,
-        abs(axis.step_ppm) * frequency_mhz,
-        data.size,
-    )
-
-
 def _start(
     chosen: Sequence[Signal],
     members: tuple[int, ...],
-    layout: _Layout,
+    layout: Layout,
     lines: LineModel,
     extra_width_ppm: float,
-) -> tuple[list[_Free], Float64, Float64]:
+) -> tuple[list[Free], Float64, Float64]:
     """Parameters in points: usual values and spreads."""
     step = abs(layout.axis.step_ppm)
     width = lines.width_ppm / step
@@ -283,7 +206,7 @@ def _start(
             usual.append(hz / layout.hz_per_point)
             spread.append(_COUPLING * hz / layout.hz_per_point)
         frees.append(
-            _Free(
+            Free(
                 at - 2,
                 at - 1,
                 tuple(range(at, len(usual))),
@@ -293,61 +216,13 @@ def _start(
     return frees, np.array(usual), np.array(spread)
 
 
-def _transform(
-    layout: _Layout, free: _Free, values: Float64
-) -> tuple[npt.NDArray[np.complex128], list[npt.NDArray[np.complex128]]]:
-    """One signal of area 1 in the time domain, and the factor of each coupling's derivative."""
-    time = layout.time
-    out = layout.line * np.exp(
-        1j * values[0] - 2j * np.pi * time * values[free.shift] - np.pi * values[free.width] * time
-    )
-    factors = []
-    for at, n in zip(free.couplings, free.neighbours, strict=True):
-        offsets, shares = sticks([(n, 1.0)])
-        # A binomial pattern is cosⁿ(πJt); its derivative by J is −n π t tan(πJt) of it.
-        turns = np.exp(-2j * np.pi * np.outer(offsets, time) * values[at])
-        pattern = shares @ turns
-        slope = (shares * offsets) @ (turns * (-2j * np.pi * time))
-        out = out * pattern
-        factors.append(slope / np.where(np.abs(pattern) < 1e-9, 1e-9, pattern))
-    return out, factors
-
-
-def _columns(layout: _Layout, frees: Sequence[_Free], values: Float64) -> Float64:
-    """Signals of area 1 and a constant, shape (points, g + 1)."""
-    rows = np.array([_transform(layout, free, values)[0] for free in frees])
-    model = scipy.fft.irfft(rows, layout.size, axis=1)[:, : layout.data.size]
-    return np.column_stack((model.T, np.ones(layout.data.size)))
-
-
-def _slopes(layout: _Layout, frees: Sequence[_Free], values: Float64, linear: Float64) -> Float64:
-    """Derivatives of the model by the nonlinear parameters, shape (points, p)."""
-    rows = np.zeros((values.size, layout.time.size), np.complex128)
-    for number, free in enumerate(frees):
-        one, factors = _transform(layout, free, values)
-        one = one * linear[number]
-        rows[free.shift] = -2j * np.pi * layout.time * one
-        rows[free.width] = -np.pi * layout.time * one
-        rows[0] += 1j * one
-        for at, factor in zip(free.couplings, factors, strict=True):
-            rows[at] = factor * one
-    return np.asarray(scipy.fft.irfft(rows, layout.size, axis=1)[:, : layout.data.size].T)
-
-
-def _projected(layout: _Layout, frees: Sequence[_Free], values: Float64) -> tuple[Float64, Float64]:
-    """Best areas and constant for given nonlinear parameters, and what is left."""
-    columns = _columns(layout, frees, values)
-    linear, *_ = np.linalg.lstsq(columns, layout.data, rcond=None)
-    return np.asarray(linear), layout.data - columns @ linear
-
-
 def _cost(
     rest: Float64, values: Float64, usual: Float64, spread: Float64, variance: float
 ) -> float:
     return float(rest @ rest) / variance + float((((values - usual) / spread) ** 2).sum())
 
 
-def _bounded(values: Float64, frees: Sequence[_Free], width_points: float) -> Float64:
+def _bounded(values: Float64, frees: Sequence[Free], width_points: float) -> Float64:
     out = values.copy()
     for free in frees:
         out[free.width] = max(out[free.width], _NARROWEST * width_points)
@@ -355,8 +230,8 @@ def _bounded(values: Float64, frees: Sequence[_Free], width_points: float) -> Fl
 
 
 def _swept(
-    layout: _Layout,
-    frees: Sequence[_Free],
+    layout: Layout,
+    frees: Sequence[Free],
     usual: Float64,
     chosen: Sequence[Signal],
     members: tuple[int, ...],
@@ -377,14 +252,14 @@ def _swept(
             reach = _room(chosen[number], chosen) / step
             by = max(_SWEEP_STEP * lines.width_ppm / step, reach / _SWEEP_MOST)
             tracks.append(np.arange(-reach, reach + 0.5 * by, by))
-        _, rest = _projected(layout, frees, values)
+        _, rest = projected(layout, frees, values)
         best = float(rest @ rest) - _SWEEP_GAIN * variance
         kept = values
         for offs in product(*tracks):
             tried = values.copy()
             for number, off in zip(pair, offs, strict=True):
                 tried[frees[number].shift] += off
-            linear, rest = _projected(layout, frees, tried)
+            linear, rest = projected(layout, frees, tried)
             cost = float(rest @ rest)
             if cost < best and all(linear[number] > 0 for number in pair):
                 best, kept = cost, tried
@@ -402,8 +277,8 @@ def _room(signal: Signal, chosen: Sequence[Signal]) -> float:
 
 
 def _result(
-    layout: _Layout,
-    frees: Sequence[_Free],
+    layout: Layout,
+    frees: Sequence[Free],
     values: Float64,
     linear: Float64,
     rest: Float64,
@@ -415,7 +290,7 @@ def _result(
 ) -> MultipletFit:
     count, step = len(frees), abs(layout.axis.step_ppm)
     slopes = np.column_stack(
-        (_columns(layout, frees, values), _slopes(layout, frees, values, linear))
+        (linear_columns(layout, frees, values), nonlinear_slopes(layout, frees, values, linear))
     )
     # Diagonal scaling keeps areas and points on one footing.
     scale = np.sqrt((slopes**2).sum(axis=0))

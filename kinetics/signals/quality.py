@@ -10,6 +10,7 @@ from kinetics.signals.calibration import Calibration
 from kinetics.signals.integrals import coverage, standard_errors
 from kinetics.signals.model import FollowPlan, Integrals
 from kinetics.signals.multiplet import MultipletFit
+from kinetics.spectra.lines import highest, width_at_half
 from kinetics.spectra.model import Spectrum
 
 # An integral ratio good to 1 % wants S/N 150 to 250 of the reference line (memory: Malz & Jancke
@@ -30,6 +31,12 @@ PATTERN_UNEXPLAINED = 0.01
 PATTERN_EXCESS = 3.0
 # A twentieth of a window holds but tails; from a fifth on a line of one may lie in both.
 OVERLAP_SEEN, OVERLAP_DOUBTFUL = 0.05, 0.2
+# A Lorentzian less the line through the edges of a window n widths wide keeps 76 % at n = 4 and
+# less below (derived); the tails outside are then guessed rather than measured.
+WIDTHS_IN_WINDOW = 4.0
+SEEN_HEIGHT = 10.0
+# Two widths from its centre a Lorentzian has 6 % of its height and 8 % of its area beyond.
+CROSSING_WIDTHS = 2.0
 
 
 def remarks_on(
@@ -55,6 +62,7 @@ def remarks_on(
     out += _phase(spectrum, plan)
     out += _fits(fits, plan)
     out += _overlaps(fits, plan)
+    out += _exchanging(spectrum, integrals, plan)
     errors = standard_errors(integrals)
     offset = 0 if plan.reference is None else 1
     biggest = float(np.max(np.abs(integrals.values))) if integrals.values.size else 0.0
@@ -132,6 +140,52 @@ def _overlaps(fits: Sequence[MultipletFit], plan: FollowPlan) -> list[Remark]:
                     subject=f"{a.species} and {b.species}",
                 )
             )
+    return out
+
+
+def _exchanging(spectrum: Spectrum, integrals: Integrals, plan: FollowPlan) -> list[Remark]:
+    """Lines of exchanging protons that are wide for their window, or about to leave it."""
+    out: list[Remark] = []
+    axis = spectrum.axis
+    for index, signal in enumerate(plan.all):
+        if not signal.exchanging or integrals.heights[index] < SEEN_HEIGHT:
+            continue
+        low, high = signal.window
+        start, stop = (int(v) for v in axis.span(signal.window))
+        line = highest(spectrum.intensities, start, stop + 1)
+        points = width_at_half(spectrum.intensities, line, max(2 * (stop - start), 8))
+        width = points * abs(axis.step_ppm)
+        place = axis.first_ppm + axis.step_ppm * line.index
+        if not np.isfinite(width) or width > signal.width / WIDTHS_IN_WINDOW:
+            broad = f"{width:.2f} ppm wide" if np.isfinite(width) else "wider than can be measured"
+            out.append(
+                Remark(
+                    "wide-for-window",
+                    f"The line of {signal.species} is {broad}, its window {signal.width:.2f} ppm.",
+                    "Much of it lies outside or is taken for baseline: its integral is too small.",
+                    "Widen the window where there is room, or measure at higher field or another "
+                    "temperature; rest no rate constant on it.",
+                    doubtful=True,
+                    subject=signal.species,
+                )
+            )
+        for other in plan.all:
+            if other is signal or low < other.centre < high:
+                continue
+            edge = other.window[0] if other.centre > place else other.window[1]
+            gap = abs(edge - place)
+            if np.isfinite(width) and gap < CROSSING_WIDTHS * width:
+                out.append(
+                    Remark(
+                        "exchanging-near",
+                        f"The line of {signal.species} stands {gap:.3f} ppm from the window of "
+                        f"{other.species}, {gap / width:.1f} of its widths.",
+                        f"Wandering on, it will add to the integral of {other.species}.",
+                        "Hold temperature and pH steady, or follow another signal of "
+                        f"{other.species}.",
+                        subject=f"{signal.species} and {other.species}",
+                    )
+                )
     return out
 
 
