@@ -6,8 +6,8 @@ import streamlit as st
 
 from dashboard import source
 from kinetics.errors import KettlewatchError
-from kinetics.logbook.connection import open_writable
-from kinetics.logbook.decisions import decide
+from kinetics.logbook.connection import open_writable, transaction
+from kinetics.logbook.decisions import append
 from kinetics.logbook.view import Following
 from kinetics.run import Run
 
@@ -71,12 +71,13 @@ def who(key: str) -> str:
 def record(
     logbook: Path, *, who: str, kind: str, subjects: list[str], new: str, why: str
 ) -> str | None:
-    """Append one decision a subject; return in words why it could not be done, else None."""
+    """Append one decision a subject, all or none; return in words why it failed, else None."""
     try:
         connection = open_writable(logbook)
         try:
-            for subject in subjects:
-                decide(connection, who=who, kind=kind, subject=subject, new=new, why=why)
+            with transaction(connection):
+                for subject in subjects:
+                    append(connection, who=who, kind=kind, subject=subject, new=new, why=why)
         finally:
             connection.close()
     except KettlewatchError as error:

@@ -144,7 +144,8 @@ def _watch(options: argparse.Namespace) -> int:
 
 
 def _fit(options: argparse.Namespace) -> int:
-    from kinetics.run import fit_document, fit_words, load_run, study_run
+    from kinetics.answers import fit_document, fit_words
+    from kinetics.run import load_run, study_run
 
     run = load_run(options.logbook)
     result = study_run(run, tuple(options.law) if options.law else None)

@@ -7,7 +7,6 @@ from dataclasses import dataclass
 from datetime import UTC, datetime
 from functools import cached_property
 from pathlib import Path
-from typing import Any
 from zoneinfo import ZoneInfo
 
 import numpy as np
@@ -18,7 +17,7 @@ from kinetics.logbook.view import Entry, LogbookView
 from kinetics.measure import amount_rule
 from kinetics.rates.question import Question
 from kinetics.rates.series import Series
-from kinetics.rates.study import Study, document, study
+from kinetics.rates.study import Study, study
 from kinetics.remarks import Remark
 from kinetics.sheet import Event, Sheet, parse_sheet
 from kinetics.signals.amounts import concentrations
@@ -27,7 +26,6 @@ from kinetics.spectra.clock import ClockSettings, Timeline, in_utc, seconds_sinc
 from kinetics.spectra.model import Float64, Stamp
 from kinetics.temperature import Logged, join, remarks_on
 from kinetics.unassigned import unassigned_remarks
-from kinetics.version import __version__
 
 STATES = ("measured", "doubtful", "set-aside", "unreadable")
 
@@ -316,29 +314,6 @@ def study_run(run: Run, laws: tuple[str, ...] | None = None) -> Study:
     return study(run.series(), run.question(laws))
 
 
-def fit_document(run: Run, result: Study) -> dict[str, Any]:
-    """Return the JSON document of ``fit --json``."""
-    counts = run.counts()
-    return {
-        "schema": 1,
-        "run": {
-            "title": run.sheet.title,
-            "experiment": run.sheet.experiment,
-            "temperature_k": run.temperature_k,
-            "sheet_version": run.sheet_version,
-            "program_version": __version__,
-        },
-        "spectra": {
-            "measured": counts["measured"],
-            "doubtful": counts["doubtful"],
-            "set_aside": counts["set-aside"],
-            "unreadable": counts["unreadable"],
-        },
-        **document(result),
-        "remarks": [str(remark) for remark in run.remarks()],
-    }
-
-
 def _timeline(entries: tuple[Entry, ...], sheet: Sheet, zone: str) -> Timeline:
     missing = Stamp(None, None, None, None, "unreadable")
     settings = ClockSettings(
@@ -358,42 +333,6 @@ def _timeline(entries: tuple[Entry, ...], sheet: Sheet, zone: str) -> Timeline:
 def _time_order(line: Timeline, entries: tuple[Entry, ...]) -> list[int]:
     far = datetime.max.replace(tzinfo=UTC)
     return sorted(range(len(entries)), key=lambda i: (line.mid[i] or far, i))
-
-
-def fit_words(run: Run, result: Study) -> list[str]:
-    """Return what ``fit`` prints for people."""
-    from kinetics.rates.words import rounded, with_interval
-
-    counts = run.counts()
-    lines = [
-        run.sheet.title or run.logbook.name,
-        "spectra: " + ", ".join(f"{n} {state}" for state, n in counts.items() if n),
-        "",
-    ]
-    percent = f"{100 * result.question.confidence:g} %"
-    for f in result.fits:
-        lines.append(
-            f"{f.law}   {f.equation}   weight {result.weights[f.law]:.3f}   {f.points} spectra"
-        )
-        lines += [f"    {with_interval(p)}" for p in f.parameters]
-        half = f.half_life()
-        if np.isfinite(half.value):
-            ends = f"({rounded(half.low, half.value)} to {rounded(half.high, half.value)})"
-            lines.append(f"    half-life {rounded(half.value, half.low, half.high)} s {ends}")
-        lines += [f"    ! {remark}" for remark in f.diagnostics.remarks]
-    lines += ["", result.verdict, f"Intervals: {percent}, profile likelihood."]
-    if result.best.series.systematic:
-        lines.append(
-            f"Beside them, {100 * result.best.series.systematic:.2g} % standard uncertainty of the "
-            "reference's concentration: it scales amounts and second-order constants, "
-            "not first-order ones."
-        )
-    lines.append(
-        "An interval is that of this run; replicate runs usually scatter more (runs of the same "
-        "reaction have been seen to differ by 10 %)."
-    )
-    lines += [f"! {remark}" for remark in run.remarks()]
-    return lines
 
 
 def event_times(run: Run) -> list[tuple[float, Event]]:

@@ -14,7 +14,8 @@ from demo_runs import dunmarolide
 from demo_runs.sheets import write_sheet
 from demo_runs.simulate import SimulatedSpectrum, simulate_run
 from demo_runs.write import write
-from kinetics.run import fit_document, load_run, study_run
+from kinetics.answers import fit_document
+from kinetics.run import load_run, study_run
 from tests.recorded import take
 
 BERLIN = ZoneInfo("Europe/Berlin")

@@ -8,9 +8,10 @@ import streamlit as st
 
 from dashboard import choice, source
 from dashboard.words import local
+from kinetics.answers import fit_document
 from kinetics.errors import KettlewatchError
 from kinetics.report import report_html
-from kinetics.run import Run, fit_document
+from kinetics.run import Run
 from kinetics.table import write_csv
 from kinetics.verify import verify
 

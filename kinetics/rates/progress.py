@@ -205,7 +205,10 @@ def progress(series: Series, question: Question) -> Progress:
     left = f"less than {100 * now.remainder_high:.1g} % of the change is still to come"
     if conversion >= _COMPLETE:
         return Progress(
-            "over", conversion, now.remainder_high, f"The reaction is over: {at} converted, {left}."
+            "over",
+            conversion,
+            now.remainder_high,
+            f"The reaction is over: it levels off at {at} conversion, {left}.",
         )
     return Progress(
         "levelled-off",
