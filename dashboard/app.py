@@ -2,7 +2,7 @@
 
 import streamlit as st
 
-from dashboard.pages import now, rates, report, runs
+from dashboard.pages import across, now, overnight, rates, report, runs
 
 
 def main() -> None:
@@ -11,7 +11,9 @@ def main() -> None:
     pages = [
         st.Page(runs.page, title="Runs", url_path="runs", default=True),
         st.Page(now.page, title="Now", url_path="now"),
+        st.Page(overnight.page, title="Overnight", url_path="overnight"),
         st.Page(rates.page, title="Rates", url_path="rates"),
+        st.Page(across.page, title="Across runs", url_path="across"),
         st.Page(report.page, title="Report", url_path="report"),
     ]
     st.navigation(pages, position="top").run()
