@@ -3,7 +3,8 @@
 ``python tests/benchmarks/quantities.py [--scale 1.0] [--only TABLE ...]``
 
 FIDs come from `demo_runs.simulate`, which shares no code with what is tested. Seeds differ from
-those of the tests, but for the table of overlaps, which shares theirs. ``--scale 0.1`` makes a tenth of the spectra. Invented data throughout.
+those of the tests, but for the table of overlaps, which shares theirs. ``--scale 0.1`` makes a
+tenth of the spectra. Invented data throughout.
 """
 
 import argparse
