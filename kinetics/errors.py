@@ -7,6 +7,7 @@
     │   └── SheetError        names file, key and what was expected
     ├── NothingToDoError      nothing was ever there to be measured or fitted      exit 3
     ├── LogbookError          held by another follower, or cannot be written       exit 4
+    │   └── LeaseLostError    another follower has taken over while this one ran
     ├── UnreadableError       one file cannot be read; ends as state `unreadable`
     ├── NotYetError           one file is not complete yet; it is looked at again
     └── FitError              the data do not allow this fit; the message says why
@@ -42,6 +43,10 @@ class LogbookError(KettlewatchError):
     """The logbook is held by another follower, damaged, or cannot be written."""
 
     exit_status = 4
+
+
+class LeaseLostError(LogbookError):
+    """Another follower has taken over; trying again would disturb it."""
 
 
 class UnreadableError(KettlewatchError):

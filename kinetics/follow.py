@@ -6,13 +6,13 @@ import signal
 import sys
 import threading
 from collections.abc import Iterator
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
 from pathlib import Path
 from types import FrameType
 
 from tqdm import tqdm
 
-from kinetics.errors import InputError, LogbookError, NothingToDoError
+from kinetics.errors import InputError, LeaseLostError, LogbookError, NothingToDoError
 from kinetics.logbook import lease
 from kinetics.logbook.record import Record
 from kinetics.sheet import read_sheet
@@ -24,6 +24,7 @@ LOG_NAME = "follower.log"
 _LOG_BYTES = 2_000_000
 _LOG_FILES = 5
 ONCE_GAP_S = 2.0
+_AFTER_TROUBLE_S = 5.0  # before a logbook that could not be written is tried again
 
 
 def follow(folder: Path, sheet_path: Path, logbook: Path, once: bool, every_s: float) -> int:
@@ -55,7 +56,8 @@ def follow(folder: Path, sheet_path: Path, logbook: Path, once: bool, every_s: f
                     return _once(folder, sheet_path, record, stop)
                 return _live(folder, sheet_path, record, holder, every_s, stop)
         finally:
-            lease.give_back(record.connection, holder)
+            with suppress(LogbookError):  # a dead holder is replaced anyway
+                lease.give_back(record.connection, holder)
 
 
 def _check_places(folder: Path, logbook: Path, once: bool) -> None:
@@ -80,7 +82,7 @@ def _once(folder: Path, sheet_path: Path, record: Record, stop: threading.Event)
         bar.n = done
         bar.refresh()
 
-    with Follower(folder, sheet_path, record, progress) as follower:
+    with Follower(folder, sheet_path, record, progress, stop.is_set) as follower:
         follower.cycle()
         stop.wait(ONCE_GAP_S)
         last = follower.cycle()
@@ -113,9 +115,10 @@ def _live(
     every_s: float,
     stop: threading.Event,
 ) -> int:
-    with Follower(folder, sheet_path, record) as follower:
+    with Follower(folder, sheet_path, record, stopping=stop.is_set) as follower:
         _cycles(follower, record, holder, every_s, stop)
-    record.tell("stopped", "following was stopped")
+    with suppress(LogbookError):
+        record.tell("stopped", "following was stopped")
     log.info("stopped")
     return 0
 
@@ -128,23 +131,34 @@ def _cycles(
     trouble = ""
     while not stop.is_set():
         try:
-            seen = follower.cycle()
-        except InputError as error:
-            # A sheet that is being edited is wrong for a while: say so and keep the last one.
-            seen = Cycle(0, (), str(error))
+            trouble = _cycle(follower, record, holder, trouble)
+        except LeaseLostError:
+            raise
         except LogbookError as error:
             log.error("%s; trying again", error)
-            stop.wait(max(every_s, 5.0))
-            continue
-        if seen.trouble != trouble:
-            trouble = seen.trouble
-            if trouble:
-                log.warning("%s", trouble)
-                record.tell("trouble", trouble)
-            else:
-                record.tell("trouble-over", "the run folder and the sheet can be read again")
-        lease.beat(record.connection, holder, trouble or "following")
+            stop.wait(max(every_s, _AFTER_TROUBLE_S))
         stop.wait(every_s)
+
+
+def _cycle(follower: Follower, record: Record, holder: str, trouble: str) -> str:
+    """Do one cycle and tell of trouble that began or ended since the last; return what holds."""
+    # Before anything is written: a follower that was displaced must not go on.
+    lease.beat(record.connection, holder, trouble or "following")
+    try:
+        seen = follower.cycle()
+    except InputError as error:
+        # A sheet that is being edited is wrong for a while: say so and keep the last one.
+        seen = Cycle(0, (), str(error))
+    if seen.trouble and seen.trouble != trouble:
+        log.warning("%s", seen.trouble)
+        record.tell("trouble", seen.trouble)
+    elif trouble and not seen.trouble:
+        record.tell("trouble-over", "the run folder and the sheet can be read again")
+    return seen.trouble
+
+
+def _silent(record: logging.LogRecord) -> None:
+    del record
 
 
 @contextmanager
@@ -158,6 +172,8 @@ def _logging_to(logbook: Path, *, console: bool) -> Iterator[None]:
     if console:
         handlers.append(logging.StreamHandler(sys.stderr))
     form = logging.Formatter("%(asctime)s %(message)s", "%Y-%m-%d %H:%M:%S")
+    # A full disk must not end in tracebacks on standard error; what matters is told there anyway.
+    handlers[0].handleError = _silent  # type: ignore[method-assign]
     for handler in handlers:
         handler.setFormatter(form)
         log.addHandler(handler)

@@ -61,6 +61,8 @@ class _Work:
     plan: FollowPlan
     calibration_id: int | None = None
     calibration: Calibration | None = None
+    # The first spectra have gone, so that no second calibration can be made from them.
+    first_gone: bool = False
     # Spectra that came before any from which a calibration could be made.
     held_back: list[tuple[Source, Raw]] = field(default_factory=list)
 
@@ -78,6 +80,8 @@ class Follower:
         The writable logbook; the caller holds its lease.
     progress
         Called with (done, total) while a backlog is worked through.
+    stopping
+        Whether to stop soon: asked between batches, since a backlog may take minutes.
     """
 
     def __init__(
@@ -86,8 +90,10 @@ class Follower:
         sheet_path: Path,
         record: Record,
         progress: Callable[[int, int], None] | None = None,
+        stopping: Callable[[], bool] = lambda: False,
     ) -> None:
         self.folder, self.sheet_path, self.record = folder, sheet_path, record
+        self._stopping = stopping
         self._progress = progress or (lambda _done, _total: None)
         self._memories: dict[str, LookMemory] = {}
         self._border = ReadingWorker()
@@ -139,15 +145,21 @@ class Follower:
     def _resumed(self, work: _Work) -> _Work:
         """Take up the calibration that the record already has for a sheet."""
         known = self.record.calibrations(work.sheet_version)
-        complete = [v for v, (_, _, done) in known.items() if done] or list(known)
-        if complete:
-            work.calibration_id, work.calibration, _ = known[max(complete)]
+        if known:  # the newest, complete or not: a follower killed half-way goes on with it
+            work.calibration_id, work.calibration, _ = known[max(known)]
         return work
 
     # -- one cycle ---------------------------------------------------------------------------
 
     def cycle(self) -> Cycle:
-        """Look once and measure what is new and complete."""
+        """Look once and measure what is new and complete.
+
+        Raises
+        ------
+        LogbookError
+            If the record cannot be written; what was not put down is taken by a later cycle.
+        """
+        self.record.check_place()
         newest = self.record.newest_sheet()
         if newest is not None and (
             newest[0] != self._work.sheet_version or self._sheet_file_changed()
@@ -165,6 +177,8 @@ class Follower:
         taken = 0
         self._not_yet = []
         for batch in _batches(fresh, self._room):
+            if self._stopping():
+                break
             taken += self._take(batch)
             self._progress(taken, len(fresh))
         waiting = tuple(
@@ -244,10 +258,20 @@ class Follower:
 
     def _take(self, batch: Sequence[tuple[str, Path, Source]]) -> int:
         taken: list[Taken] = []
+        seen: dict[str, str] = {}
+        held_back = list(self._work.held_back)
         outcomes = self._border.read_all([(root, source) for _, root, source in batch])
-        for (prefix, root, source), outcome in zip(batch, outcomes, strict=True):
-            taken.extend(self._measured(prefix, root, source, outcome))
-        self._put(taken)
+        try:
+            for (prefix, root, source), outcome in zip(batch, outcomes, strict=True):
+                taken.extend(self._measured(prefix, root, source, outcome))
+                if not isinstance(outcome, NotYetError):
+                    seen[prefix + source.name] = source.signature
+            self._put(taken)
+        except BaseException:
+            # Nothing of the batch is in the record: all of it is still to be taken.
+            self._work.held_back = held_back
+            raise
+        self._signatures.update(seen)
         self._maybe_recalibrate()
         return len(taken)
 
@@ -262,9 +286,7 @@ class Follower:
         if isinstance(outcome, UnreadableError):
             digest = source.fallback_hash(root)
             yield Taken(None, name, digest, source.signature, None, str(outcome))
-            self._signatures[name] = source.signature
             return
-        self._signatures[name] = source.signature
         for raw in outcome:
             yield from self._one(source, _renamed(raw, prefix))
 
@@ -306,11 +328,12 @@ class Follower:
         """Make the first calibration of a sheet from one spectrum; False if it does not serve."""
         work = self._work
         try:
-            work.calibration = calibrate([raw], work.plan)
+            calibration = calibrate([raw], work.plan)
         except UnreadableError as why:
             log.warning("%s cannot serve as the first spectrum: %s", raw.source, why)
             return False
-        work.calibration_id = self.record.add_calibration(work.sheet_version, work.calibration)
+        work.calibration_id = self.record.add_calibration(work.sheet_version, calibration)
+        work.calibration = calibration
         if not self.record.has_measurements():
             self.record.complete_calibration(work.calibration_id)
         return True
@@ -318,13 +341,14 @@ class Follower:
     def _maybe_recalibrate(self) -> None:
         """Make the second calibration once twenty spectra have been measured with the first."""
         work = self._work
-        if work.calibration is None or work.calibration.version != 1:
+        if work.calibration is None or work.calibration.version != 1 or work.first_gone:
             return
         first = self.record.first_measured(work.calibration_id or 0, CALIBRATION_SPECTRA)
         if len(first) < CALIBRATION_SPECTRA:
             return
         raws = [raw for raw in (self._again(*entry) for entry in first) if raw is not None]
         if not raws:
+            work.first_gone = True
             return
         calibration = calibrate(raws, work.plan, version=2)
         identifier = self.record.add_calibration(work.sheet_version, calibration)
@@ -341,9 +365,12 @@ class Follower:
                 return
         identifier = work.calibration_id or 0
         if self.record.is_complete(identifier):
+            self._maybe_recalibrate()  # where a follower was killed just before it
             return
         rest = iter(self.record.unmeasured(identifier))
         while chunk := list(islice(rest, _BATCH)):
+            if self._stopping():
+                return
             batch = []
             for _, source, sha256 in chunk:
                 raw = self._again(source, sha256)

@@ -9,7 +9,7 @@ from datetime import UTC, datetime, timedelta
 
 import psutil
 
-from kinetics.errors import LogbookError
+from kinetics.errors import LeaseLostError, LogbookError
 from kinetics.logbook.connection import transaction
 
 # A holder on another machine cannot be looked at; after this long without a sign it is dead.
@@ -102,7 +102,7 @@ def beat(connection: sqlite3.Connection, identifier: str, state: str) -> None:
 
     Raises
     ------
-    LogbookError
+    LeaseLostError
         If the lease has gone to somebody else.
     """
     with transaction(connection):
@@ -111,7 +111,7 @@ def beat(connection: sqlite3.Connection, identifier: str, state: str) -> None:
             (datetime.now(UTC).isoformat(), state, identifier),
         )
         if done.rowcount != 1:
-            raise LogbookError("another follower has taken over this logbook")
+            raise LeaseLostError("another follower has taken over this logbook")
 
 
 def give_back(connection: sqlite3.Connection, identifier: str) -> None:

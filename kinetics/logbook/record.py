@@ -8,14 +8,18 @@ version). Writing either twice changes nothing, whatever was killed when.
 import json
 import sqlite3
 from collections.abc import Sequence
+from contextlib import nullcontext
 from dataclasses import dataclass
 from datetime import UTC, datetime
 from pathlib import Path
 
 import numpy as np
 
+from kinetics.errors import LogbookError
 from kinetics.logbook import codec, decisions
+from kinetics.logbook.connection import FILE_NAME as RECORD_NAME
 from kinetics.logbook.connection import open_writable, transaction
+from kinetics.logbook.traces import FILE_NAME as TRACES_NAME
 from kinetics.logbook.traces import TraceWriter
 from kinetics.measure import Measurement, picture_row
 from kinetics.sheet import fingerprint
@@ -58,6 +62,7 @@ class Record:
             "SELECT COALESCE(MAX(trace_offset + trace_size), 0) FROM measured"
         ).fetchone()
         self._traces = TraceWriter(folder, int(row[0]))
+        self._place = _place_of(folder)
 
     def __enter__(self) -> "Record":
         return self
@@ -239,7 +244,40 @@ class Record:
     def take(
         self, batch: Sequence[Taken], calibration: int | None, picture: tuple[float, float]
     ) -> None:
-        """Put a batch of spectra down: traces first, then all rows in one transaction."""
+        """Put a batch of spectra down: traces first, then all rows in one transaction.
+
+        Raises
+        ------
+        LogbookError
+            If it cannot be written; then nothing of the batch is in the record.
+        """
+        self.check_place()
+        end = self._traces.end
+        try:
+            self._take(batch, calibration, picture)
+        except BaseException:
+            self._traces.back_to(end)
+            raise
+
+    def check_place(self) -> None:
+        """Make sure that what is written still reaches the logbook.
+
+        A file that was deleted or moved away while open takes writes without a murmur.
+
+        Raises
+        ------
+        LogbookError
+            If the logbook no longer stands where it was opened.
+        """
+        if _place_of(self.folder) != self._place:
+            raise LogbookError(
+                f"{self.folder}: the logbook has gone from its place or was replaced; put it back, "
+                "or start the follower again"
+            )
+
+    def _take(
+        self, batch: Sequence[Taken], calibration: int | None, picture: tuple[float, float]
+    ) -> None:
         written = [
             (item, self._traces.append(item.measurement.trace))
             for item in batch
@@ -344,11 +382,27 @@ class Record:
     # -- story -------------------------------------------------------------------------------
 
     def tell(self, kind: str, text: str, spectrum: int | None = None) -> None:
-        """Add a line to the story (inside or outside a transaction)."""
-        self.connection.execute(
-            "INSERT INTO story (at, kind, text, spectrum) VALUES (?, ?, ?, ?)",
-            (_now(), kind, text, spectrum),
-        )
+        """Add a line to the story (inside a transaction, or in one of its own).
+
+        Raises
+        ------
+        LogbookError
+            If it cannot be written.
+        """
+        with nullcontext() if self.connection.in_transaction else transaction(self.connection):
+            self.connection.execute(
+                "INSERT INTO story (at, kind, text, spectrum) VALUES (?, ?, ?, ?)",
+                (_now(), kind, text, spectrum),
+            )
+
+
+def _place_of(folder: Path) -> tuple[tuple[int, int], ...]:
+    """Device and inode of the files that are held open; empty where they are not there."""
+    try:
+        stats = [(folder / name).stat() for name in (RECORD_NAME, TRACES_NAME)]
+    except OSError:
+        return ()
+    return tuple((stat.st_dev, stat.st_ino) for stat in stats)
 
 
 def _facts(raw: Raw) -> dict[str, object]:

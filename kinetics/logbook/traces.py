@@ -8,7 +8,6 @@ reader's memory map stays valid.
 import os
 import zlib
 from pathlib import Path
-from typing import BinaryIO
 
 import numpy as np
 
@@ -25,22 +24,51 @@ class TraceWriter:
         """Open the file; `end` is the number of float32 values the record knows of."""
         path = folder / FILE_NAME
         path.touch()
-        self._file: BinaryIO = path.open("r+b")
+        # Unbuffered: what a full disk refused must not lie in a buffer and fail again later.
+        self._file = path.open("r+b", buffering=0)
         self._end = end
 
     def append(self, trace: Float32) -> tuple[int, int, int]:
-        """Write a trace and return its offset (in values), size and CRC-32."""
+        """Write a trace and return its offset (in values), size and CRC-32.
+
+        Raises
+        ------
+        LogbookError
+            If it cannot be written.
+        """
         data = np.ascontiguousarray(trace, "<f4").tobytes()
-        self._file.seek(4 * self._end)
-        self._file.write(data)
+        rest = memoryview(data)
+        try:
+            self._file.seek(4 * self._end)
+            while rest:
+                rest = rest[self._file.write(rest) :]
+        except OSError as error:
+            raise LogbookError(f"the traces cannot be written ({error.strerror})") from None
         offset = self._end
         self._end += trace.size
         return offset, int(trace.size), zlib.crc32(data)
 
     def flush(self) -> None:
-        """Force everything written so far onto the disk."""
-        self._file.flush()
-        os.fsync(self._file.fileno())
+        """Force everything written so far onto the disk.
+
+        Raises
+        ------
+        LogbookError
+            If that fails.
+        """
+        try:
+            os.fsync(self._file.fileno())
+        except OSError as error:
+            raise LogbookError(f"the traces cannot be written ({error.strerror})") from None
+
+    @property
+    def end(self) -> int:
+        """Number of float32 values that stand in the file as far as is known here."""
+        return self._end
+
+    def back_to(self, end: int) -> None:
+        """Forget traces whose rows were never committed; they will be overwritten."""
+        self._end = end
 
     def close(self) -> None:
         """Close the file."""

@@ -38,7 +38,7 @@ from kinetics.rates.series import make_series  # noqa: E402
 from kinetics.sheet import Sheet, read_sheet  # noqa: E402
 from kinetics.signals.amounts import concentrations  # noqa: E402
 from kinetics.signals.calibration import calibrate  # noqa: E402
-from kinetics.spectra.model import Raw, Stamp  # noqa: E402
+from tests.measured import raw_of  # noqa: E402
 
 Float64 = npt.NDArray[np.float64]
 STARTED = datetime(2026, 3, 3, 19, 0, tzinfo=UTC)
@@ -54,32 +54,6 @@ class Outcome:
     of_sums: float
     of_fids: float
     held: bool
-
-
-def raw_of(spectrum: SimulatedSpectrum) -> Raw:
-    """A simulated spectrum as a reader would return it."""
-    instrument = spectrum.instrument
-    return Raw(
-        data=np.asarray(spectrum.fid, np.complex64),
-        domain="time",
-        frequency_mhz=instrument.frequency_mhz,
-        spectral_width_hz=instrument.spectral_width_hz,
-        carrier_ppm=instrument.carrier_ppm,
-        axis=None,
-        group_delay=instrument.group_delay,
-        recorded_phase=None,
-        scans=spectrum.scans,
-        recycle_s=None,
-        flip_angle_deg=None,
-        temperature_k=None,
-        nucleus="1H",
-        solvent="",
-        title="",
-        stamp=Stamp(spectrum.start, spectrum.end, None, None, ""),
-        source=str(spectrum.number),
-        sha256=str(spectrum.number),
-        format="",
-    )
 
 
 def scenario_of(law: str, spectra: int) -> tuple[Scenario, float, Question]:

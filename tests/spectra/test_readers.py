@@ -104,13 +104,10 @@ class TestEveryReader:
         except FileNotFoundError:
             return  # not even recognised
         missing = completeness(tmp_path, now, OsLayer())
-        if kind == "text" and part > 0:
-            # Plain columns have no end mark; stillness over two looks must do.
-            assert missing is None or missing
-            return
         assert missing
-        with pytest.raises((NotYetError, UnreadableError)):
-            read(tmp_path, now)
+        if kind != "text":  # a table cut inside a line reads as a shorter one; hence `completeness`
+            with pytest.raises((NotYetError, UnreadableError)):
+                read(tmp_path, now)
 
     def test_garbage_is_told_in_words(self, tmp_path: Path, kind: Format) -> None:
         (source,) = written(tmp_path, kind)
