@@ -14,7 +14,7 @@ from kinetics.logbook.record import Record
 from kinetics.logbook.traces import TraceWriter
 from kinetics.logbook.view import LogbookView
 from kinetics.verify import verify
-from kinetics.watch import Follower
+from kinetics.watch import CALIBRATION_SPECTRA, Follower
 from tests.recorded import STARTED, drop, take
 
 COUNT = 24  # past the second calibration
@@ -23,8 +23,17 @@ COUNT = 24  # past the second calibration
 @pytest.fixture(scope="module")
 def home(tmp_path_factory: pytest.TempPathFactory) -> Path:
     """A run, its sheet, and its undisturbed logbook."""
-    home = tmp_path_factory.mktemp("unwritable")
-    drop(home / "run", COUNT)
+    return made(tmp_path_factory.mktemp("unwritable"), COUNT)
+
+
+@pytest.fixture(scope="module")
+def home_of_twenty(tmp_path_factory: pytest.TempPathFactory) -> Path:
+    """A run that ends with the spectrum on which the second calibration falls."""
+    return made(tmp_path_factory.mktemp("twenty"), CALIBRATION_SPECTRA)
+
+
+def made(home: Path, count: int) -> Path:
+    drop(home / "run", count)
     write_sheet(home / "sheet.toml", STARTED)
     take(home / "run", home / "sheet.toml", home / "undisturbed.logbook")
     return home
@@ -135,12 +144,12 @@ def test_a_logbook_that_goes_away_is_noticed_and_taken_up_when_it_is_back(
 
 @pytest.mark.parametrize("step", ["calibrate", "_catch_up"])
 def test_ended_about_the_second_calibration_and_no_spectrum_comes_after(
-    home: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch, step: str
+    home_of_twenty: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch, step: str
 ) -> None:
     """The next follower finishes it without a new spectrum to wake it."""
     import kinetics.watch
 
-    logbook = tmp_path / "x.logbook"
+    home, logbook = home_of_twenty, tmp_path / "x.logbook"
     real = getattr(kinetics.watch, step, None) or getattr(Follower, step)
 
     def ends(*given: object, **named: object) -> object:
